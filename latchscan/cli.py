@@ -1,0 +1,297 @@
+"""The command line: options in, exit status out; the only place that prints.
+
+Exit status: 0 nothing failed, 1 a limit failed, 2 could not start, 3 could not conclude.
+Everything heavy is imported inside the command that needs it, so that ``--help`` is instant.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+import sys
+import traceback
+from collections.abc import Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import click
+
+from latchscan import __version__
+from latchscan.errors import LatchscanError, OptionError
+
+if TYPE_CHECKING:
+    from latchscan.layout.model import Box
+    from latchscan.report.summary import Paint
+
+NOTHING_FAILED = 0
+LIMIT_FAILED = 1
+COULD_NOT_START = 2
+COULD_NOT_CONCLUDE = 3
+INTERRUPTED = 130
+"""What shells expect of a program that was stopped from the keyboard (128 + SIGINT)."""
+
+COLDEST_C, HOTTEST_C = -55.0, 200.0
+"""Temperatures that the material models take; the same range as in the technology file."""
+
+_EXAMPLE = """
+\b
+Example:
+  latchscan scan samples/valve_driver.gds --tech larch180 --out out/
+"""
+
+
+def run(arguments: Sequence[str] | None = None) -> int:
+    """Run the command line and return its exit status; no exception leaves this function."""
+    status = _guarded(arguments)
+    _print("")
+    return status
+
+
+def _print(text: str) -> None:
+    """Print on standard output; a reader that has gone is no reason to complain."""
+    try:
+        click.echo(text, nl=False, color=True)
+        sys.stdout.flush()
+    except BrokenPipeError:
+        # give the interpreter's own last flush somewhere to go
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _guarded(arguments: Sequence[str] | None) -> int:
+    """Run and turn every error into one line and a status."""
+    try:
+        status = commands.main(args=arguments, prog_name="latchscan", standalone_mode=False)
+    except click.exceptions.NoArgsIsHelpError as error:
+        _say(error.format_message())
+        return COULD_NOT_START
+    except click.ClickException as error:
+        return _complain(COULD_NOT_START, error.format_message(), _usage_hint(error))
+    except LatchscanError as error:
+        return _complain(error.exit_status, error.message, error.hint)
+    except (click.Abort, KeyboardInterrupt):
+        return _complain(INTERRUPTED, "stopped from the keyboard", "")
+    except Exception as error:  # the door: a traceback would exit with 1, "a limit failed"
+        return _complain(COULD_NOT_CONCLUDE, *_unforeseen(error))
+    return status if isinstance(status, int) else NOTHING_FAILED
+
+
+def _unforeseen(error: Exception) -> tuple[str, str]:
+    """Message and hint for an error that nobody foresaw."""
+    if os.environ.get("LATCHSCAN_DEBUG"):
+        traceback.print_exception(error)
+    if isinstance(error, MemoryError):
+        return "not enough memory", "give a --window or fewer --jobs"
+    return (
+        f"internal: {type(error).__name__}: {error}",
+        "set LATCHSCAN_DEBUG=1 for a traceback to report",
+    )
+
+
+def _usage_hint(error: click.ClickException) -> str:
+    context = getattr(error, "ctx", None)
+    return f"see {context.command_path} --help" if context is not None else ""
+
+
+def _say(text: str) -> None:
+    click.echo(text, err=True)
+
+
+def _complain(status: int, message: str, hint: str) -> int:
+    """Print an error and its hint as one line; return the status it means."""
+    whole = f"{message} ({hint})" if hint else message
+    _say("latchscan: error: " + " ".join(whole.split()))
+    return status
+
+
+def available_cores() -> int:
+    """Cores that this process may use."""
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
+
+
+@click.group(
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 80},
+    epilog=_EXAMPLE,
+)
+@click.version_option(__version__, prog_name="latchscan", message="%(prog)s %(version)s")
+def commands() -> None:
+    """Estimate where a CMOS block's parasitic thyristors can latch.
+
+    Reads a layout and a technology file, and writes findings and a picture.
+    """
+
+
+@commands.command(epilog=_EXAMPLE)
+@click.argument("layout", type=click.Path(path_type=Path))
+@click.option(
+    "--tech",
+    required=True,
+    metavar="T",
+    help="Technology: a YAML file, or the name of a shipped one (larch180, open130).",
+)
+@click.option(
+    "--out",
+    "out_dir",
+    required=True,
+    metavar="DIR",
+    type=click.Path(path_type=Path),
+    help="Directory for scan.json, emitters.csv and heatmap.svg.",
+)
+@click.option("--top", metavar="CELL", help="Top cell, when the layout has several.")
+@click.option(
+    "--window",
+    nargs=4,
+    type=float,
+    metavar="X0 Y0 X1 Y1",
+    help="Scan only this part of the layout [um].",
+)
+@click.option(
+    "--temperature",
+    type=float,
+    metavar="C",
+    help="Temperature [degrees Celsius] instead of the technology's.",
+)
+@click.option(
+    "--jobs",
+    type=click.IntRange(min=1),
+    metavar="N",
+    help="Processes to work in; all available cores unless given.",
+)
+@click.option("--quiet", is_flag=True, help="No progress and no summary.")
+def scan(
+    *,
+    layout: Path,
+    tech: str,
+    out_dir: Path,
+    top: str | None,
+    window: tuple[float, float, float, float] | None,
+    temperature: float | None,
+    jobs: int | None,
+    quiet: bool,
+) -> int:
+    """Scan LAYOUT (GDSII or OASIS, gzipped or not) and write the results.
+
+    Exit status: 0 nothing failed, 1 a limit failed, 2 could not start, 3 could not conclude.
+    """
+    window_um = None if window is None else checked_window(window)
+    if temperature is not None:
+        require_temperature(temperature)
+    from latchscan.report import write_reports
+    from latchscan.report.summary import summary
+    from latchscan.report.write import require_directory
+
+    require_directory(out_dir)
+    from latchscan.layout.source import open_layout
+    from latchscan.scan import ScanOptions
+    from latchscan.scan import scan as run_scan
+    from latchscan.tasks import Silent, open_workers
+    from latchscan.technology.load import load_technology
+
+    loaded = load_technology(tech)
+    source = open_layout(layout, technology=loaded.technology, top=top)
+    options = ScanOptions(window_um=window_um, temperature_c=temperature)
+    progress = Bars() if sys.stderr.isatty() and not quiet else Silent()
+    with open_workers(jobs or available_cores(), progress) as workers:
+        result = run_scan(source, loaded, options, workers)
+    files = write_reports(result, out_dir)
+    if not quiet:
+        _print(summary(result, files, painter()))
+    failed = any(finding.severity == "fail" for finding in result.findings)
+    return LIMIT_FAILED if failed else NOTHING_FAILED
+
+
+@commands.group(epilog="\b\nExample:\n  latchscan tech check my_process.yaml\n")
+def tech() -> None:
+    """Work on technology files."""
+
+
+@tech.command(epilog="\b\nExample:\n  latchscan tech check techfiles/larch180.yaml\n")
+@click.argument("file")
+def check(file: str) -> int:
+    """List every problem of the technology FILE.
+
+    Prints one line a problem: file:line:column: key: what is wrong, what was expected.
+    Exit status: 0 none, 2 some.
+    """
+    from latchscan.technology.check import check_technology
+    from latchscan.technology.load import read_technology_file
+
+    path, content = read_technology_file(file)
+    problems = check_technology(content, str(path))
+    lines = [str(problem) for problem in problems] or [f"{path}: no problems"]
+    _print("".join(line + "\n" for line in lines))
+    return COULD_NOT_START if problems else NOTHING_FAILED
+
+
+@tech.command()
+def schema() -> int:
+    """Print the JSON Schema of technology files, for editors."""
+    import json
+
+    from latchscan.technology.schema import technology_schema
+
+    _print(json.dumps(technology_schema(), indent=2) + "\n")
+    return NOTHING_FAILED
+
+
+def checked_window(window: tuple[float, float, float, float]) -> Box:
+    """The window when it is finite and has a width and a height.
+
+    Raises
+    ------
+    OptionError
+        It is not finite, or a far corner is not above and right of the near one.
+    """
+    x0, y0, x1, y1 = window
+    shown = f"{x0:g} {y0:g} {x1:g} {y1:g}"
+    if not all(math.isfinite(value) for value in window):
+        raise OptionError(f"--window: expected four finite numbers, got {shown}")
+    if x1 <= x0 or y1 <= y0:
+        raise OptionError(f"--window: expected X0 < X1 and Y0 < Y1, got {shown}")
+    return window
+
+
+def require_temperature(temperature_c: float) -> None:
+    """Raise `OptionError` unless the temperature lies in the range of the models [C]."""
+    if not COLDEST_C <= temperature_c <= HOTTEST_C:
+        raise OptionError(
+            f"--temperature: expected {COLDEST_C:g} to {HOTTEST_C:g} degrees Celsius, got"
+            f" {temperature_c:g}"
+        )
+
+
+def painter() -> Paint:
+    """Colours for the summary when it goes to a terminal that wants them, else none."""
+    from latchscan.report.summary import unpainted
+
+    if not sys.stdout.isatty() or os.environ.get("NO_COLOR") or os.environ.get("TERM") == "dumb":
+        return unpainted
+    colours = {"fail": "red", "watch": "yellow", "good": "green"}
+
+    def paint(text: str, severity: str) -> str:
+        return click.style(text, fg=colours[severity], bold=True)
+
+    return paint
+
+
+class Bars:
+    """Progress on standard error, one bar a stage."""
+
+    def __init__(self) -> None:
+        from tqdm import tqdm
+
+        self._tqdm = tqdm
+        self._bar = tqdm(total=0, disable=True)
+
+    def begin(self, stage: str, total: int) -> None:
+        """Start the bar of a stage."""
+        self._bar.close()
+        self._bar = self._tqdm(
+            total=total, desc=stage, file=sys.stderr, leave=False, dynamic_ncols=True,
+            colour=None,
+        )  # fmt: skip
+
+    def step(self, count: int = 1) -> None:
+        """Advance the bar."""
+        self._bar.update(count)

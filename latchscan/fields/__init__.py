@@ -1,0 +1,1 @@
+"""Numerics on arrays: conducting sheets and layered half spaces; knows no layout."""

@@ -1,0 +1,1 @@
+"""What is drawn: reading, regions, bodies, taps, emitters, distances."""

@@ -1,0 +1,296 @@
+"""Regions of the block: wells, taps, diffusions, merged and exact.
+
+In: an opened layout and a technology.  Out: `Regions`.  The block is cut into tiles, the
+tiles into windows (`tiles.py`); the technology's expressions run in each window
+(`evaluation.py`); what meets on a seam is joined (`stitching.py`).  The result does not
+depend on the sizes of tiles and windows, nor on the number of workers.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numpy as np
+import shapely
+
+from latchscan.errors import LayoutError, OptionError
+from latchscan.layout.derivation import DRAWN_REGIONS, TAPS, Program, compile_program
+from latchscan.layout.geometry import SUBGRID, rings_to_polygons
+from latchscan.layout.model import (
+    REGION_NAMES,
+    Box,
+    Floats,
+    Geometries,
+    Ints,
+    Label,
+    Regions,
+    frozen,
+)
+from latchscan.layout.source import LayoutSource
+from latchscan.layout.stitching import Rings, join_rings, select_rings, sort_rings, stitch
+from latchscan.layout.tiles import Pair, TileResult, TileTask, derive_tiles
+from latchscan.layout.windows import BoxDbu
+from latchscan.tasks import Workers
+from latchscan.technology.model import Technology
+
+TILES_A_SIDE = 3
+SMALLEST_TILE_UM = 100.0
+LARGEST_TILE_UM = 500.0
+MOST_TILES_A_SIDE = 40
+LARGEST_BLOCK_DBU = 2**30 // SUBGRID
+"""Products of two coordinates [grid steps] must fit into 64 bits."""
+LARGEST_PITCH_UM = 50.0
+"""Windows that follow a coarser pitch would hold too much to be seen twice."""
+MOST_TILES_A_TASK = 4
+FEW_TASKS = 6
+"""A process that gets a task must first open the layout: few tasks, but enough to share."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sizes:
+    """Sizes of tiles and windows [um]; None leaves the choice to the program."""
+
+    tile_um: float | None = None
+    window_um: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RegionStatistics:
+    """Number of polygons of a region and their total area."""
+
+    count: int
+    area_um2: float
+
+
+def derive_regions(
+    source: LayoutSource,
+    technology: Technology,
+    window_um: Box | None,
+    workers: Workers,
+    *,
+    sizes: Sizes | None = None,
+) -> Regions:
+    """Merged regions of the block or of a window of it.
+
+    Parameters
+    ----------
+    source
+        The opened layout.
+    technology
+        Its role expressions say what each region is.
+    window_um
+        Box x0, y0, x1, y1 [um] to analyse; None for the whole block.  Shapes around it
+        still count for grown and thinned layers.
+    workers
+        Where the tiles run.
+    sizes
+        Sizes of tiles and windows; they change nothing but the time.
+
+    Raises
+    ------
+    OptionError
+        If the window does not meet the block or holds nothing.
+    LayoutError
+        If the block holds nothing on any layer that the roles use, or is too large.
+    """
+    program = compile_program(technology)
+    block = _analysed_box(source, window_um)
+    layers = _used_layers(program, technology)
+    tasks = _tasks(source, program, layers, block, sizes or Sizes())
+    batches = workers.map("regions", derive_tiles, tasks)
+    results = [result for batch in batches for result in batch]
+    if not any(result.shape_count for result in results):
+        raise _nothing_found(source, window_um)
+    unit = source.database_unit_um
+    lines = _seams(tasks, block)
+    shapes = {
+        name: rings_to_polygons(_joined(results, name, lines), unit) for name in DRAWN_REGIONS
+    }
+    label_pairs = [_pair(text) for text in technology.labels.layers]
+    return Regions(
+        bbox_um=_to_um(block, unit),
+        shapes=shapes,
+        contact_box_um=frozen(_tap_contacts(results, shapes, unit)),
+        labels=_labels_inside(source, label_pairs, _to_um(block, unit)),
+    )
+
+
+def region_statistics(regions: Regions) -> dict[str, RegionStatistics]:
+    """Count and area [um2] of every region of `REGION_NAMES`."""
+    return {
+        name: RegionStatistics(
+            count=len(regions.shapes[name]),
+            area_um2=float(np.sum(shapely.area(regions.shapes[name]))),
+        )
+        for name in REGION_NAMES
+    }
+
+
+def _pair(text: str) -> Pair:
+    layer, datatype = text.split("/")
+    return (int(layer), int(datatype))
+
+
+def _to_um(box: BoxDbu, unit_um: float) -> Box:
+    x0, y0, x1, y1 = (value * unit_um for value in box)
+    return (x0, y0, x1, y1)
+
+
+def _analysed_box(source: LayoutSource, window_um: Box | None) -> BoxDbu:
+    block = source.bbox_dbu
+    width, height = block[2] - block[0], block[3] - block[1]
+    if max(width, height) > LARGEST_BLOCK_DBU:
+        raise LayoutError(
+            f"{source.name}: cell {source.top} is {width} x {height} database units large;"
+            f" expected at most {LARGEST_BLOCK_DBU} along each side",
+            hint="a stray shape far outside the block makes it that large",
+        )
+    if window_um is None:
+        return block
+    x0, y0, x1, y1 = (round(value / source.database_unit_um) for value in window_um)
+    cut = (max(x0, block[0]), max(y0, block[1]), min(x1, block[2]), min(y1, block[3]))
+    if cut[0] >= cut[2] or cut[1] >= cut[3]:
+        raise _nothing_found(source, window_um)
+    return cut
+
+
+def _nothing_found(source: LayoutSource, window_um: Box | None) -> LayoutError | OptionError:
+    block = " ".join(f"{value:.10g}" for value in source.bbox_um)
+    if window_um is None:
+        return LayoutError(
+            f"{source.name}: cell {source.top} holds no shape on the layers that the roles use;"
+            f" expected at least one, got none in its box {block} um"
+        )
+    asked = " ".join(f"{value:.10g}" for value in window_um)
+    return OptionError(
+        f"--window {asked}: no shape on any layer of the technology there; expected a window"
+        f" on the block's shapes, got an empty one",
+        hint=f"the block's box is {block} um",
+    )
+
+
+def _used_layers(program: Program, technology: Technology) -> dict[str, tuple[Pair, ...]]:
+    names = {*program.layers(wide=False), *program.layers(wide=True), *program.contact_layers}
+    return {
+        name: tuple(_pair(text) for text in technology.layers[name].gds) for name in sorted(names)
+    }
+
+
+def _tasks(
+    source: LayoutSource,
+    program: Program,
+    layers: Mapping[str, tuple[Pair, ...]],
+    block: BoxDbu,
+    sizes: Sizes,
+) -> list[TileTask]:
+    unit = source.database_unit_um
+    pitch = source.repeat_pitch_dbu()
+    if pitch is not None and max(pitch) * unit > LARGEST_PITCH_UM:
+        pitch = None
+    x_cuts, y_cuts = (
+        _cuts(block[i], block[i + 2], sizes.tile_um, unit, (pitch or (1, 1))[i]) for i in (0, 1)
+    )
+    window = None
+    if sizes.window_um is not None:
+        window = (max(1, round(sizes.window_um / unit)),) * 2
+    tiles = [(x0, y0, x1, y1) for y0, y1 in pairwise(y_cuts) for x0, x1 in pairwise(x_cuts)]
+    share = max(1, min(MOST_TILES_A_TASK, len(tiles) // FEW_TASKS))
+    return [
+        TileTask(
+            source=source,
+            program=program,
+            layers=layers,
+            tiles_dbu=tuple(tiles[start : start + share]),
+            block_dbu=block,
+            window_dbu=window,
+            pitch_dbu=pitch,
+        )
+        for start in range(0, len(tiles), share)
+    ]
+
+
+def _cuts(low: int, high: int, tile_um: float | None, unit_um: float, pitch_dbu: int) -> list[int]:
+    """Edges of the tiles along one axis [database units], whole pitches apart."""
+    side = tile_um
+    if side is None:
+        side = (high - low) * unit_um / TILES_A_SIDE
+        side = min(max(side, SMALLEST_TILE_UM), LARGEST_TILE_UM)
+        side = max(side, (high - low) * unit_um / MOST_TILES_A_SIDE)
+    step = pitch_dbu * max(1, round(side / unit_um / pitch_dbu))
+    return [*range(low, high, step), high]
+
+
+def _seams(tasks: list[TileTask], block: BoxDbu) -> tuple[Ints, Ints]:
+    """Places (x, y) of the lines between tiles [grid steps]."""
+    x = {tile[0] for task in tasks for tile in task.tiles_dbu} - {block[0]}
+    y = {tile[1] for task in tasks for tile in task.tiles_dbu} - {block[1]}
+    return (
+        np.array(sorted(x), dtype=np.int64) * SUBGRID,
+        np.array(sorted(y), dtype=np.int64) * SUBGRID,
+    )
+
+
+def _joined(results: list[TileResult], name: str, seams: tuple[Ints, Ints]) -> Rings:
+    """Rings of a region over all tiles; only those that reach a seam need joining."""
+    rings = join_rings([r.regions[name] for r in results if name in r.regions])
+    if not rings.count:
+        return rings
+    on_seam = np.isin(rings.points[:, 0], seams[0]) | np.isin(rings.points[:, 1], seams[1])
+    reaches = np.logical_or.reduceat(on_seam, rings.first[:-1])
+    joined = stitch(select_rings(rings, reaches))
+    return sort_rings(join_rings([select_rings(rings, ~reaches), joined]))
+
+
+def _tap_contacts(
+    results: list[TileResult], shapes: Mapping[str, Geometries], unit_um: float
+) -> Floats:
+    """Boxes [um] of contacts on taps: merged, each once, sorted by (y0, x0)."""
+    sure = np.unique(np.concatenate([r.sure_contacts for r in results]), axis=0)
+    unsure = np.unique(np.concatenate([r.unsure_contacts for r in results]), axis=0)
+    if len(unsure):
+        taps = np.concatenate([shapes[name] for name in TAPS])
+        boxes = shapely.box(*(unsure / SUBGRID * unit_um).T)
+        row, tap = shapely.STRtree(taps).query(boxes, predicate="intersects")
+        shared = shapely.area(shapely.intersection(boxes[row], taps[tap]))
+        on_tap = np.unique(row[shared > 0])
+        sure = np.unique(np.concatenate([sure, unsure[on_tap]]), axis=0)
+    steps = _merged_boxes(sure)
+    return steps[np.lexsort((steps[:, 0], steps[:, 1]))] / SUBGRID * unit_um
+
+
+def _merged_boxes(boxes: Ints) -> Ints:
+    """Boxes that overlap or share an edge replaced by the box around them."""
+    while len(boxes) > 1:
+        row, other = shapely.STRtree(shapely.box(*boxes.T)).query(
+            shapely.box(*boxes.T), predicate="intersects"
+        )
+        later = row < other
+        row, other = row[later], other[later]
+        low = np.maximum(boxes[row, :2], boxes[other, :2])
+        high = np.minimum(boxes[row, 2:], boxes[other, 2:])
+        linked = (high > low).any(axis=1)
+        if not linked.any():
+            return boxes
+        row, other = row[linked], other[linked]
+        lead = np.arange(len(boxes))
+        while True:
+            least = np.minimum(lead[row], lead[other])
+            np.minimum.at(lead, row, least)
+            np.minimum.at(lead, other, least)
+            if np.array_equal(lead[row], lead[other]):
+                break
+        _, group = np.unique(lead, return_inverse=True)
+        order = np.argsort(group, kind="stable")
+        first = np.searchsorted(group[order], np.arange(group.max() + 1))
+        low = np.minimum.reduceat(boxes[order, :2], first)
+        boxes = np.hstack([low, np.maximum.reduceat(boxes[order, 2:], first)])
+    return boxes
+
+
+def _labels_inside(source: LayoutSource, pairs: list[Pair], box: Box) -> tuple[Label, ...]:
+    x0, y0, x1, y1 = box
+    return tuple(
+        label for label in source.labels(pairs) if x0 <= label.x_um <= x1 and y0 <= label.y_um <= y1
+    )

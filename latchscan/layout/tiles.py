@@ -1,0 +1,258 @@
+"""Tiles: polygons fetched once, sorted into small windows, derived, joined again.
+
+In: a `TileTask`, small enough to send to another process.  Out: the regions of each tile as
+rings, joined across its windows, and the contacts that may lie on a tap, both in grid steps.
+
+Rectangles, nearly all of a layout, are sorted into the windows and clipped as columns of
+numbers; only what a window draws becomes objects, and a window that has been seen before
+(equal content relative to its corner) is not drawn at all.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from latchscan.layout.derivation import Program
+from latchscan.layout.evaluation import NO_BOXES, WindowResult, evaluate
+from latchscan.layout.geometry import SUBGRID, draw_rings, merged, to_rings
+from latchscan.layout.model import Ints
+from latchscan.layout.source import LayoutSource, PolygonColumns
+from latchscan.layout.stitching import Rings, join_rings, select_rings, stitch
+from latchscan.layout.windows import (
+    BoxDbu,
+    Grid,
+    SortedShapes,
+    cut_window,
+    sort_layers,
+    window_key,
+)
+
+Pair = tuple[int, int]
+
+SHAPES_A_WINDOW = 250
+"""Shapes that a window should hold: booleans cost more than proportionally beyond."""
+SMALLEST_WINDOW_UM = 10.0
+LARGEST_WINDOW_UM = 100.0
+MOST_WINDOWS_A_SIDE = 50
+MISSES_BEFORE_GIVING_UP = 300
+"""Windows in a row without a repeat after which the tile stops looking for repeats."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TileTask:
+    """What a process needs to derive a few tiles.
+
+    Attributes
+    ----------
+    source, program
+        The layout and the steps.
+    layers
+        Layer name -> its layer/datatype pairs.
+    tiles_dbu
+        The tiles [database units].
+    block_dbu
+        The analysed box [database units].
+    window_dbu
+        Size (x, y) of a window, or None to choose it by the number of shapes.
+    pitch_dbu
+        Pitch (x, y) of the layout's largest array, or None.
+    """
+
+    source: LayoutSource
+    program: Program
+    layers: Mapping[str, tuple[Pair, ...]]
+    tiles_dbu: tuple[BoxDbu, ...]
+    block_dbu: BoxDbu
+    window_dbu: tuple[int, int] | None
+    pitch_dbu: tuple[int, int] | None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class TileResult:
+    """Regions of a tile [grid steps], canonical rings, and its tap contacts.
+
+    Attributes
+    ----------
+    shape_count
+        Shapes that the tile's layers hold, in the tile and its margin.
+    regions
+        Region name -> rings; an absent name is an empty region.
+    sure_contacts, unsure_contacts
+        Boxes (n, 4), as in `WindowResult`.
+    """
+
+    shape_count: int
+    regions: Mapping[str, Rings]
+    sure_contacts: Ints
+    unsure_contacts: Ints
+
+
+@dataclass(slots=True)
+class _Memory:
+    """Results of windows by content, until repeats fail to appear."""
+
+    results: dict[tuple[object, ...], WindowResult] = field(default_factory=dict)
+    misses: int = 0
+
+    @property
+    def hopeful(self) -> bool:
+        """Whether it is still worth looking for repeats."""
+        return self.misses < MISSES_BEFORE_GIVING_UP
+
+
+def derive_tiles(task: TileTask) -> list[TileResult]:
+    """Regions and tap contacts of every tile of a task."""
+    memory = _Memory()
+    return [_derive_tile(task, tile, memory) for tile in task.tiles_dbu]
+
+
+def _derive_tile(task: TileTask, tile: BoxDbu, memory: _Memory) -> TileResult:
+    shapes = _fetch(task, tile)
+    counts = {name: len(boxes) + rings.count for name, (boxes, rings) in shapes.items()}
+    count = sum(counts.values())
+    if not count:
+        return _blank(task, tile)
+    # contacts are columns all the way: only the other shapes make a window dear
+    dear = count - sum(counts[name] for name in task.program.contact_layers)
+    grid = _choose_grid(task, tile, max(dear, 1))
+    columns = sort_layers(task.program, shapes, grid)
+    results = _derive_windows(task, grid, columns, memory)
+    names = [name for name, _ in task.program.regions]
+    regions = {name: stitch(_gather(results, name)) for name in names}
+    sure = [r.sure_contacts + np.tile(corner, 2) for r, corner in results]
+    unsure = [r.unsure_contacts + np.tile(corner, 2) for r, corner in results]
+    return TileResult(
+        shape_count=count,
+        regions={name: rings for name, rings in regions.items() if rings.count},
+        sure_contacts=_distinct(sure),
+        unsure_contacts=_distinct(unsure),
+    )
+
+
+def _blank(task: TileTask, tile: BoxDbu) -> TileResult:
+    """A tile without any shape: complements cover it, all else is empty."""
+    x0, y0, x1, y1 = (value * SUBGRID for value in tile)
+    square = np.array([[x0, y0], [x1, y0], [x1, y1], [x0, y1]], dtype=np.int64)
+    whole = Rings(points=square, first=np.array([0, 4], dtype=np.int64))
+    covered = [n for n, i in task.program.regions if task.program.steps[i].complemented]
+    return TileResult(
+        shape_count=0,
+        regions=dict.fromkeys(covered, whole),
+        sure_contacts=NO_BOXES,
+        unsure_contacts=NO_BOXES,
+    )
+
+
+def _distinct(parts: list[Ints]) -> Ints:
+    return np.unique(np.concatenate([NO_BOXES, *parts]), axis=0)
+
+
+def _gather(results: list[tuple[WindowResult, Ints]], name: str) -> Rings:
+    found = [(r.regions[name], corner) for r, corner in results if name in r.regions]
+    return join_rings(
+        [Rings(points=rings.points + corner, first=rings.first) for rings, corner in found]
+    )
+
+
+def _fetch(task: TileTask, tile: BoxDbu) -> dict[str, tuple[Ints, Rings]]:
+    """Each layer's rectangles and other shapes around the tile [grid steps]."""
+    margin = _margin_dbu(task)
+    x0, y0, x1, y1 = tile
+    pairs = sorted({pair for group in task.layers.values() for pair in group})
+    columns = task.source.window((x0 - margin, y0 - margin, x1 + margin, y1 + margin), pairs)
+    cleaned: dict[bytes, Rings] = {}
+    shapes = {}
+    for name, group in task.layers.items():
+        parts = [_separate(columns[pair], cleaned) for pair in group]
+        shapes[name] = (
+            np.concatenate([boxes for boxes, _ in parts]),
+            join_rings([rings for _, rings in parts]),
+        )
+    return shapes
+
+
+def _margin_dbu(task: TileTask) -> int:
+    return int(np.ceil(task.program.margin_um / task.source.database_unit_um))
+
+
+def _separate(columns: PolygonColumns, cleaned: dict[bytes, Rings]) -> tuple[Ints, Rings]:
+    """Rectangles as boxes; all other shapes as rings that wind once around their insides."""
+    points, first = columns.points * SUBGRID, columns.first
+    sizes = np.diff(first)
+    four = sizes == 4
+    corners = points[np.repeat(four, sizes)].reshape(-1, 4, 2)
+    turns = np.roll(corners, -1, axis=1) - corners
+    upright = np.all(np.any(turns == 0, axis=2), axis=1)
+    upright &= np.all(corners[:, 0] + corners[:, 2] == corners[:, 1] + corners[:, 3], axis=1)
+    boxes = np.hstack([corners[upright].min(axis=1), corners[upright].max(axis=1)])
+    boxes = boxes[(boxes[:, 0] < boxes[:, 2]) & (boxes[:, 1] < boxes[:, 3])]
+    other = np.ones(len(sizes), dtype=np.bool_)
+    other[np.flatnonzero(four)[upright]] = False
+    kept = select_rings(Rings(points=points, first=first), other)
+    return boxes, _cleaned(kept, cleaned)
+
+
+def _cleaned(rings: Rings, known: dict[bytes, Rings]) -> Rings:
+    """The same areas without crossings: a lobe that winds backwards would cancel overlaps."""
+    parts = []
+    for start, end in zip(rings.first[:-1].tolist(), rings.first[1:].tolist(), strict=True):
+        corner = rings.points[start]
+        relative = rings.points[start:end] - corner
+        key = relative.tobytes()
+        if key not in known:
+            one = Rings(points=relative, first=np.array([0, len(relative)], dtype=np.int64))
+            known[key] = to_rings(merged(draw_rings(one)))
+        parts.append(Rings(points=known[key].points + corner, first=known[key].first))
+    return join_rings(parts)
+
+
+def _choose_grid(task: TileTask, tile: BoxDbu, shape_count: int) -> Grid:
+    """Windows of about `SHAPES_A_WINDOW` shapes, multiples of the pitch where there is one."""
+    x0, y0, x1, y1 = tile
+    if task.window_dbu is not None:
+        size = task.window_dbu
+    else:
+        unit = task.source.database_unit_um
+        share = SHAPES_A_WINDOW / shape_count * (x1 - x0) * (y1 - y0)
+        largest = max(LARGEST_WINDOW_UM / unit, max(x1 - x0, y1 - y0) / MOST_WINDOWS_A_SIDE)
+        side = min(max(share**0.5, SMALLEST_WINDOW_UM / unit), largest)
+        pitch_x, pitch_y = task.pitch_dbu or (1, 1)
+        size = (
+            pitch_x * max(1, round(side / pitch_x)),
+            pitch_y * max(1, round(side / pitch_y)),
+        )
+    return Grid(
+        tile=(x0 * SUBGRID, y0 * SUBGRID, x1 * SUBGRID, y1 * SUBGRID),
+        size=(size[0] * SUBGRID, size[1] * SUBGRID),
+        counts=(-(-(x1 - x0) // size[0]), -(-(y1 - y0) // size[1])),
+        margin=_margin_dbu(task) * SUBGRID,
+    )
+
+
+def _derive_windows(
+    task: TileTask,
+    grid: Grid,
+    columns: Mapping[str, Mapping[str, SortedShapes]],
+    memory: _Memory,
+) -> list[tuple[WindowResult, Ints]]:
+    """Result and corner of every window."""
+    block = np.array(task.block_dbu, dtype=np.int64) * SUBGRID
+    unit = task.source.database_unit_um
+    found = []
+    for index in range(grid.counts[0] * grid.counts[1]):
+        window, corner = cut_window(grid, index, columns, block)
+        if not memory.hopeful:
+            found.append((evaluate(task.program, window, unit), corner))
+            continue
+        key = window_key(window)
+        result = memory.results.get(key)
+        if result is None:
+            memory.misses += 1
+            result = memory.results[key] = evaluate(task.program, window, unit)
+        else:
+            memory.misses = 0
+        found.append((result, corner))
+    return found

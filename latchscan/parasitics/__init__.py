@@ -1,0 +1,1 @@
+"""Physical coefficients for the fields: resistances of wells and substrate."""

@@ -1,0 +1,134 @@
+"""Emitters in groups that are solved together, on the layout's own pitch where it has one.
+
+In go the emitters' boxes, out come groups of indices.  The idea: where most emitters
+repeat at a pitch, groups are tiles of a multiple of it, so that equal groups in equal
+surroundings come up again and need one solution; elsewhere groups are halved until they are
+small.
+"""
+
+from __future__ import annotations
+
+from itertools import pairwise
+
+import numpy as np
+from numpy.typing import NDArray
+
+from latchscan.layout.model import Floats, Ints
+
+MOST_EMITTERS = 64
+_TILE_FACTOR = 1.75
+"""Tiles of a repeating layout hold more: dense arrays leave room on the same grid."""
+_REPEATING_SHARE = 0.6
+_FEWEST_TO_REPEAT = 500
+_CANDIDATES = 24
+_KEY_PER_UM = 1000.0
+_WIDEST_UM = 80.0
+"""A group never spreads wider: its window would hold too much of the layout."""
+
+
+def cluster_emitters(boxes_um: Floats, most: int = MOST_EMITTERS) -> list[Ints]:
+    """Groups of about `most` emitters at most that lie together.
+
+    Parameters
+    ----------
+    boxes_um
+        (n, 4) x0, y0, x1, y1 [um].
+
+    Returns
+    -------
+    list of ndarray
+        Ascending indices; every emitter is in one group.  Moving all boxes together
+        changes nothing.
+    """
+    if len(boxes_um) == 0:
+        return []
+    middle = (boxes_um[:, :2] + boxes_um[:, 2:]) / 2.0
+    groups = [np.arange(len(boxes_um), dtype=np.int64)]
+    pitch = repeat_pitch(boxes_um)
+    if pitch is not None:
+        most = int(_TILE_FACTOR * most)
+        groups = _tiles(middle, _tile_size(middle, pitch, most))
+    result: list[Ints] = []
+    for group in groups:
+        result.extend(_halve(middle, group, most))
+    return result
+
+
+def repeat_pitch(boxes_um: Floats) -> tuple[float, float] | None:
+    """Smallest steps along x and y that carry most emitters onto equal ones [um].
+
+    A direction without such a step has pitch 0; None where neither direction has one.
+    """
+    if len(boxes_um) < _FEWEST_TO_REPEAT:
+        return None
+    grid = np.rint((boxes_um - boxes_um[:, :2].min(axis=0)[[0, 1, 0, 1]]) * _KEY_PER_UM)
+    grid = grid.astype(np.int64)
+    x, y = (_axis_pitch(grid, axis) / _KEY_PER_UM for axis in (0, 1))
+    return (x, y) if x or y else None
+
+
+def _axis_pitch(grid: Ints, axis: int) -> int:
+    """Pitch along one axis in grid units, 0 where there is none."""
+    size = grid[:, 2:] - grid[:, :2]
+    order = np.lexsort((grid[:, axis], grid[:, 1 - axis], size[:, 0], size[:, 1]))
+    row, alike = grid[order], size[order]
+    steps = []
+    for ahead in (1, 2, 3, 4, 6, 8):
+        same = np.all(alike[ahead:] == alike[:-ahead], axis=1)
+        same &= row[ahead:, 1 - axis] == row[:-ahead, 1 - axis]
+        steps.append((row[ahead:, axis] - row[:-ahead, axis])[same])
+    step, count = np.unique(np.concatenate(steps), return_counts=True)
+    likely = step[np.argsort(-count, kind="stable")[:_CANDIDATES]]
+    for candidate in np.sort(likely):
+        if candidate > 0 and _repeating_share(grid, axis, int(candidate)) >= _REPEATING_SHARE:
+            return int(candidate)
+    return 0
+
+
+def _repeating_share(grid: Ints, axis: int, step: int) -> float:
+    """Share of emitters that land on an equal one when moved by a step."""
+    moved = grid.copy()
+    moved[:, axis] += step
+    moved[:, axis + 2] += step
+    return float(np.isin(_row_keys(moved), _row_keys(grid)).mean())
+
+
+def _row_keys(grid: Ints) -> NDArray[np.uint64]:
+    """One number a box; two boxes share one only by an improbable accident."""
+    factors = np.array(
+        [0x9E3779B97F4A7C15, 0xC2B2AE3D27D4EB4F, 0x165667B19E3779F9, 0xD6E8FEB86659FD93],
+        dtype=np.uint64,
+    )
+    keys = np.zeros(len(grid), dtype=np.uint64)
+    for column, factor in enumerate(factors):
+        keys += grid[:, column].astype(np.uint64) * factor
+    return keys
+
+
+def _tile_size(middle: Floats, pitch: tuple[float, float], most: int) -> tuple[float, float]:
+    """Multiples of the pitch that hold about three quarters of `most` emitters."""
+    extent = np.maximum(np.ptp(middle, axis=0), 1e-3)
+    side = float(np.sqrt(0.75 * most * extent.prod() / len(middle)))
+    x, y = (step * max(1, round(side / step)) if step else side for step in pitch)
+    return x, y
+
+
+def _tiles(middle: Floats, size: tuple[float, float]) -> list[Ints]:
+    # a little below the lowest emitter: rounding must not put its equals in another tile
+    place = np.floor((middle - middle.min(axis=0) + 1e-4) / np.asarray(size)).astype(np.int64)
+    order = np.lexsort((place[:, 0], place[:, 1]))
+    change = np.any(np.diff(place[order], axis=0) != 0, axis=1)
+    bounds = [0, *(np.flatnonzero(change) + 1).tolist(), len(order)]
+    return [np.sort(order[a:b]) for a, b in pairwise(bounds)]
+
+
+def _halve(middle: Floats, group: Ints, most: int) -> list[Ints]:
+    """Halve a group across its longer side until every part is small enough."""
+    inside = middle[group]
+    if len(group) <= most and float(np.ptp(inside, axis=0).max()) <= _WIDEST_UM:
+        return [group]
+    axis = int(np.argmax(np.round(np.ptp(inside, axis=0), 4)))
+    order = np.lexsort((np.round(inside[:, 1 - axis], 4), np.round(inside[:, axis], 4)))
+    half = len(group) // 2
+    low, high = np.sort(group[order[:half]]), np.sort(group[order[half:]])
+    return _halve(middle, low, most) + _halve(middle, high, most)

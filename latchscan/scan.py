@@ -1,0 +1,161 @@
+"""The pipeline: a layout and a technology in, a `Scan` out.  Read this file first.
+
+Every line of `scan` is one stage; every value between two stages is a frozen dataclass
+documented where it is defined.  Nothing here reads options, prints or writes files.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from latchscan.caveats import Caveat
+from latchscan.constants import kelvin
+from latchscan.layout.bodies import assemble_layout
+from latchscan.layout.distances import measure_distances, measure_spacings
+from latchscan.layout.model import Box
+from latchscan.layout.pairs import find_pairs
+from latchscan.layout.regions import derive_regions
+from latchscan.layout.source import LayoutSource
+from latchscan.parasitics.join import join_families
+from latchscan.parasitics.substrate import solve_substrate
+from latchscan.parasitics.well import solve_wells
+from latchscan.pnpn.sites import evaluate_sites
+from latchscan.rules import judge
+from latchscan.rules.model import Evidence, Finding
+from latchscan.tasks import Workers
+from latchscan.technology.load import LoadedTechnology
+from latchscan.technology.model import Technology
+
+RESISTANCE_ERROR_LIMIT = 0.02
+"""Relative error of a resistance above which the result carries a caveat."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ScanOptions:
+    """What the user may choose for one scan.
+
+    Attributes
+    ----------
+    window_um
+        Box of the layout to scan, None for all of it.
+    temperature_c
+        Temperature [C], None for the technology's own.
+    """
+
+    window_um: Box | None = None
+    temperature_c: float | None = None
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Origin:
+    """Where a result comes from: the layout and technology files it was made of."""
+
+    layout_name: str
+    layout_sha256: str
+    top: str
+    bbox_um: Box
+    database_unit_um: float
+    technology_name: str
+    technology_sha256: str
+    temperature_c: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Scan:
+    """The whole result of a scan, ready for any report."""
+
+    origin: Origin
+    evidence: Evidence
+    findings: tuple[Finding, ...]
+    caveats: tuple[Caveat, ...]
+
+
+def scan(
+    source: LayoutSource, loaded: LoadedTechnology, options: ScanOptions, workers: Workers
+) -> Scan:
+    """Measure a layout, solve its resistances, evaluate its thyristors and judge them.
+
+    Raises
+    ------
+    InputError
+        The layout, the technology or an option is wrong.
+    AnalysisError
+        No trustworthy answer could be computed.
+    """
+    technology = loaded.technology
+    origin = _origin(source, loaded, options)
+    temperature_k = kelvin(origin.temperature_c)
+    regions = derive_regions(source, technology, options.window_um, workers)
+    layout = assemble_layout(regions, technology)
+    distances = measure_distances(layout, workers)
+    spacings = measure_spacings(layout)
+    pairs = find_pairs(layout, technology.loop.pair_reach_um)
+    wells = solve_wells(layout, pairs, technology, temperature_k, workers)
+    substrate = solve_substrate(layout, pairs, technology, temperature_k, workers)
+    resistances, transfers = join_families(wells, substrate)
+    sites = evaluate_sites(layout, pairs, resistances, transfers, technology, temperature_k)
+    evidence = Evidence(
+        layout=layout,
+        distances=distances,
+        spacings=spacings,
+        resistances=resistances,
+        pairs=pairs,
+        transfers=transfers,
+        sites=sites,
+    )
+    findings = judge(evidence, technology)
+    caveats = _caveats(source, technology, options, evidence)
+    return Scan(origin=origin, evidence=evidence, findings=findings, caveats=caveats)
+
+
+def _origin(source: LayoutSource, loaded: LoadedTechnology, options: ScanOptions) -> Origin:
+    technology = loaded.technology
+    asked = options.temperature_c
+    return Origin(
+        layout_name=source.name,
+        layout_sha256=source.sha256,
+        top=source.top,
+        bbox_um=source.bbox_um,
+        database_unit_um=source.database_unit_um,
+        technology_name=technology.name,
+        technology_sha256=loaded.sha256,
+        temperature_c=technology.temperature_c if asked is None else asked,
+    )
+
+
+def _caveats(
+    source: LayoutSource, technology: Technology, options: ScanOptions, evidence: Evidence
+) -> tuple[Caveat, ...]:
+    """Collect what the reader of the result must keep in mind."""
+    layout = evidence.layout
+    found = [Caveat(code="estimate"), Caveat(code="lateral-gain-closed-form"), *source.notes]
+    if technology.substrate.pwell_sheet_resistance_ohm_sq is not None:
+        found.append(Caveat(code="substrate-window"))
+    found += [
+        Caveat(code="assumed-number", detail=key)
+        for key, value in technology.quantities()
+        if value.assumption
+    ]
+    bare = layout.taps.contact_count == 0
+    if bare.any():
+        detail = f"{int(bare.sum())} taps"
+        found.append(Caveat(code="uncontacted-taps", detail=detail))
+    tied = set(layout.taps.body[~bare].tolist())
+    untied = [body.id for index, body in enumerate(layout.bodies) if index not in tied]
+    if untied:
+        found.append(Caveat(code="untied-body", detail=_some(untied)))
+    vague = int(np.sum(evidence.resistances.relative_error > RESISTANCE_ERROR_LIMIT))
+    if vague:
+        found.append(Caveat(code="resistance-error", detail=f"{vague} resistances"))
+    if not np.any(layout.emitters.injector != ""):
+        found.append(Caveat(code="no-injectors"))
+    if options.window_um is not None:
+        found.append(Caveat(code="window"))
+    return tuple(dict.fromkeys(found))
+
+
+def _some(names: list[str], most: int = 8) -> str:
+    shown = ", ".join(names[:most])
+    return shown if len(names) <= most else f"{shown} and {len(names) - most} more"

@@ -1,0 +1,1 @@
+"""The technology: a YAML file in, a checked frozen value out."""
