@@ -197,6 +197,8 @@ def scan(
     files = write_reports(result, out_dir)
     if not quiet:
         _print(summary(result, files, painter()))
+    if result.unsolved_count:
+        return COULD_NOT_CONCLUDE
     failed = any(finding.severity == "fail" for finding in result.findings)
     return LIMIT_FAILED if failed else NOTHING_FAILED
 

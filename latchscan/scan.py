@@ -28,7 +28,7 @@ from latchscan.tasks import Workers
 from latchscan.technology.load import LoadedTechnology
 from latchscan.technology.model import Technology
 
-RESISTANCE_ERROR_LIMIT = 0.02
+RESISTANCE_ERROR_LIMIT = 0.05
 """Relative error of a resistance above which the result carries a caveat."""
 
 
@@ -60,16 +60,25 @@ class Origin:
     technology_name: str
     technology_sha256: str
     temperature_c: float
+    supply_v: float
+    probe_current_a: float
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Scan:
-    """The whole result of a scan, ready for any report."""
+    """The whole result of a scan, ready for any report.
+
+    Attributes
+    ----------
+    unsolved_count
+        Emitters whose resistance has no trustworthy solution; no rule takes one for passed.
+    """
 
     origin: Origin
     evidence: Evidence
     findings: tuple[Finding, ...]
     caveats: tuple[Caveat, ...]
+    unsolved_count: int
 
 
 def scan(
@@ -106,8 +115,14 @@ def scan(
         sites=sites,
     )
     findings = judge(evidence, technology)
-    caveats = _caveats(source, technology, options, evidence)
-    return Scan(origin=origin, evidence=evidence, findings=findings, caveats=caveats)
+    unsolved = int(np.sum(np.isnan(resistances.mean_ohm[: len(layout.emitters.ids)])))
+    return Scan(
+        origin=origin,
+        evidence=evidence,
+        findings=findings,
+        caveats=_caveats(source, technology, options, evidence, unsolved),
+        unsolved_count=unsolved,
+    )
 
 
 def _origin(source: LayoutSource, loaded: LoadedTechnology, options: ScanOptions) -> Origin:
@@ -122,11 +137,17 @@ def _origin(source: LayoutSource, loaded: LoadedTechnology, options: ScanOptions
         technology_name=technology.name,
         technology_sha256=loaded.sha256,
         temperature_c=technology.temperature_c if asked is None else asked,
+        supply_v=technology.loop.supply_v,
+        probe_current_a=technology.loop.probe_current_a,
     )
 
 
 def _caveats(
-    source: LayoutSource, technology: Technology, options: ScanOptions, evidence: Evidence
+    source: LayoutSource,
+    technology: Technology,
+    options: ScanOptions,
+    evidence: Evidence,
+    unsolved: int,
 ) -> tuple[Caveat, ...]:
     """Collect what the reader of the result must keep in mind."""
     layout = evidence.layout
@@ -146,6 +167,8 @@ def _caveats(
     untied = [body.id for index, body in enumerate(layout.bodies) if index not in tied]
     if untied:
         found.append(Caveat(code="untied-body", detail=_some(untied)))
+    if unsolved:
+        found.append(Caveat(code="unsolved", detail=f"{unsolved} emitters"))
     vague = int(np.sum(evidence.resistances.relative_error > RESISTANCE_ERROR_LIMIT))
     if vague:
         found.append(Caveat(code="resistance-error", detail=f"{vague} resistances"))

@@ -316,10 +316,13 @@ def scan(of: Evidence | None = None, **names: str) -> Scan:
             bbox_um=measured.layout.regions.bbox_um,
             database_unit_um=0.001,
             temperature_c=125.0,
+            supply_v=1.8,
+            probe_current_a=5.0e-5,
         ),
         evidence=measured,
         findings=judge(measured, technology()),
         caveats=(Caveat(code="estimate"), Caveat(code="untied-body", detail="nwell-2")),
+        unsolved_count=0,
     )
 
 

@@ -231,7 +231,10 @@ def _agreement(both: Floats, seen: Floats, floating: bool) -> tuple[Floats, Floa
 
 
 def _solved(matrix: Floats, right: Floats) -> Floats:
-    solution = np.asarray(np.linalg.solve(matrix, right), dtype=np.float64)
+    try:
+        solution = np.asarray(np.linalg.solve(matrix, right), dtype=np.float64)
+    except np.linalg.LinAlgError:
+        raise ConvergenceError("substrate sheet: equations without solution") from None
     worst = float(np.abs(matrix @ solution - right).max() / max(np.abs(right).max(), 1e-300))
     if not worst < _BALANCE:
         raise ConvergenceError(

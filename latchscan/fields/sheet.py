@@ -248,7 +248,10 @@ def _solve(equations: Equations, right: Floats) -> tuple[tuple[Floats, ...], flo
     if len(cut) == 0:
         return (solved,), residual
     insulated, change = solved[:, :count], solved[:, count:]
-    inner: NDArray[np.float64] = np.linalg.solve(change[cut], insulated[cut])
+    try:
+        inner: NDArray[np.float64] = np.linalg.solve(change[cut], insulated[cut])
+    except np.linalg.LinAlgError:
+        raise ConvergenceError("sheet: singular equations; expected one solution") from None
     grounded = insulated - change @ inner
     grounded[cut] = inner
     return (insulated, grounded), residual

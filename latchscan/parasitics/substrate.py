@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from latchscan.errors import AnalysisError
 from latchscan.fields.layered import LayeredKernel, Stack, tabulate_kernel
 from latchscan.layout.model import Floats, Layout, Pairs, frozen
 from latchscan.parasitics.material import pwell_temperature_factor
@@ -60,15 +61,11 @@ def solve_substrate(
     BodyFields
         Infinite where neither a contacted tap nor the back side carries current away.
 
-    Raises
-    ------
-    ConvergenceError, GeometryError, ResolutionError
-        Where a window has no trustworthy solution.
-
     Notes
     -----
-    Taps outside an emitter's window are left out, which can only raise a resistance.  Holes
-    arrive at the surface: the depth of the n-well is small against the distances.
+    Emitters of a window without a trustworthy solution stay NaN.  Taps outside an emitter's
+    window are left out, which can only raise a resistance.  Holes arrive at the surface: the
+    depth of the n-well is small against the distances.
     """
     substrate = technology.substrate
     factor = pwell_temperature_factor(technology, temperature_k)
@@ -91,8 +88,9 @@ def solve_substrate(
         )
         for window in cut_windows(scene, pairs, technology.loop.patch_radius_um)
     ]
-    for task, solved in zip(tasks, workers.map("substrate", _solve, tasks), strict=True):
-        fields.fill(task.window, solved)
+    for task, solved in zip(tasks, workers.map("substrate", _solve_or_none, tasks), strict=True):
+        if solved is not None:
+            fields.fill(task.window, solved)
     return fields.frozen()
 
 
@@ -106,6 +104,14 @@ def substrate_stack(technology: Technology, factor: float) -> Stack:
         thickness_um=tuple(layer.thickness_um.typical for layer in substrate.layers),
         bottom_contacted=substrate.back_side == "contacted",
     )
+
+
+def _solve_or_none(task: _Task) -> WindowFields | None:
+    """Fields of a window; None where no solution can be trusted."""
+    try:
+        return _solve(task)
+    except AnalysisError:
+        return None
 
 
 def _solve(task: _Task) -> WindowFields:

@@ -32,7 +32,7 @@ from latchscan.layout.model import (
 from latchscan.parasitics.clusters import cluster_emitters
 from latchscan.parasitics.material import pwell_temperature_factor, sheet_temperature_factor
 from latchscan.parasitics.model import BodyFields, Resistances, Transfers
-from latchscan.parasitics.well_windows import WellWindow, WindowResult, solve_window
+from latchscan.parasitics.well_windows import WellWindow, WindowResult, solve_or_none
 from latchscan.tasks import Workers
 from latchscan.technology.model import Technology
 
@@ -66,7 +66,8 @@ def solve_wells(
     -------
     BodyFields
         Rows: emitters of n-wells and of isolated p-wells, and the isolated p-wells (as anodes)
-        themselves; all others NaN.  A body without a contacted tap has infinite resistances.
+        themselves; all others NaN, and so are those of a window without a trustworthy
+        solution.  A body without a contacted tap has infinite resistances.
 
     Notes
     -----
@@ -254,10 +255,12 @@ def _run(
         digests = [window.digest() for window in windows]
         number = {digest: k for k, digest in enumerate(dict.fromkeys(digests))}
         unique = dict(zip(digests, windows, strict=True))
-        solved = workers.map("wells", solve_window, [unique[digest] for digest in number])
+        solved = workers.map("wells", solve_or_none, [unique[digest] for digest in number])
         again = []
         for job, window, digest in zip(jobs, windows, digests, strict=True):
             result = solved[number[digest]]
+            if result is None:
+                continue
             if np.any(result.cut_error > ACCEPTED_CUT_ERROR) and window.box_um is not None:
                 again.append(_Job(body=job.body, members=job.members, halo_um=2.0 * job.halo_um))
             else:

@@ -26,12 +26,12 @@ then pair index.
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.constants import thermal_voltage_v
-from latchscan.errors import ConvergenceError
 from latchscan.layout.model import Floats, Ints, Layout, Pairs, frozen
 from latchscan.parasitics.model import Resistances, Transfers
 from latchscan.pnpn.circuit import LoopCircuit, Shunt, Transistor, conductance_and_share
@@ -109,13 +109,65 @@ def evaluate_sites(
     Returns
     -------
     Sites
-        One row a pair, in the order and with the trigger currents told above.
+        One row a pair, in the order and with the trigger currents told above.  Pairs whose
+        resistances have no solution (NaN) come last, all their numbers NaN.
 
     Raises
     ------
     ConvergenceError
-        A pair has no resistance, or a fold fails its own check.
+        A fold fails its own check.
     """
+    known = _solved(pairs, resistances, transfers)
+    rows = np.flatnonzero(known)
+    some = Pairs(**{f.name: getattr(pairs, f.name)[rows] for f in fields(pairs)})
+    taken = Transfers(**{f.name: getattr(transfers, f.name)[rows] for f in fields(transfers)})
+    sites = _evaluated(layout, some, resistances, taken, technology, temperature_k)
+    return _with_unsolved(layout, pairs, sites, rows, np.flatnonzero(~known))
+
+
+def _solved(pairs: Pairs, resistances: Resistances, transfers: Transfers) -> NDArray[np.bool_]:
+    """Whether both halves of a pair have their resistances; an untied one needs no transfer."""
+    good = np.ones(len(pairs.anode), dtype=np.bool_)
+    for source, transfer in (
+        (pairs.anode, transfers.well_ohm),
+        (pairs.cathode, transfers.substrate_ohm),
+    ):
+        own = resistances.mean_ohm[source]
+        good &= np.isinf(own) | ~(np.isnan(own) | np.isnan(transfer))
+    return good
+
+
+def _with_unsolved(
+    layout: Layout, pairs: Pairs, sites: Sites, solved: Ints, unsolved: Ints
+) -> Sites:
+    """All sites: the evaluated ones, renumbered to the whole list, then the others as NaN."""
+    order = np.concatenate([solved[sites.pair], unsolved])
+    place = pair_places_um(layout, pairs)[order]
+    columns: dict[str, NDArray[Any]] = {}
+    for column in fields(sites):
+        values = getattr(sites, column.name)
+        if values.dtype.kind not in "fb":
+            continue
+        empty = np.full(len(unsolved), False if values.dtype == np.bool_ else np.nan)
+        columns[column.name] = np.concatenate([values, empty.astype(values.dtype)])
+    columns |= {
+        "ids": np.array([f"site-{rank + 1}" for rank in range(order.size)], dtype=np.str_),
+        "pair": order,
+        "x_um": place[:, 0].copy(),
+        "y_um": place[:, 1].copy(),
+    }
+    return Sites(**{name: frozen(values) for name, values in columns.items()})
+
+
+def _evaluated(
+    layout: Layout,
+    pairs: Pairs,
+    resistances: Resistances,
+    transfers: Transfers,
+    technology: Technology,
+    temperature_k: float,
+) -> Sites:
+    """Sites of pairs that all have their resistances."""
     sources = collect_sources(layout, technology.loop.patch_radius_um)
     views = (
         _single_ends(pairs, resistances, transfers, sources),
@@ -202,8 +254,8 @@ def _circuit(
             beta=betas[1],
             reverse_beta=REVERSE_BETA_PNP,
         ),
-        well=_shunt("well", ends.well_self_ohm, ends.well_transfer_ohm),
-        substrate=_shunt("substrate", ends.substrate_self_ohm, ends.substrate_transfer_ohm),
+        well=Shunt(self_ohm=ends.well_self_ohm, transfer_ohm=ends.well_transfer_ohm),
+        substrate=Shunt(self_ohm=ends.substrate_self_ohm, transfer_ohm=ends.substrate_transfer_ohm),
         supply_v=technology.loop.supply_v,
         temperature_k=temperature_k,
     )
@@ -216,17 +268,6 @@ def _transistor(
     density = numbers.saturation_current_density_a_um2.typical
     saturation = saturation_current_at_temperature(density, temperature_k) * area_um2
     return saturation, numbers.knee_current_density_a_um2.typical * area_um2
-
-
-def _shunt(body: str, self_ohm: Floats, transfer_ohm: Floats) -> Shunt:
-    untied = np.isinf(self_ohm)
-    missing = np.isnan(self_ohm) | (np.isnan(transfer_ohm) & ~untied)
-    if missing.any():
-        raise ConvergenceError(
-            f"pair {int(np.argmax(missing))}: {body} resistance; expected a number,"
-            f" got none for {int(missing.sum())} of {missing.size} pairs"
-        )
-    return Shunt(self_ohm=self_ohm, transfer_ohm=transfer_ohm)
 
 
 def _gains(circuit: LoopCircuit, technology: Technology, temperature_k: float) -> _Gains:

@@ -54,6 +54,10 @@ def scan_record(scan: Scan) -> Record:
             "sha256": origin.technology_sha256,
         },
         "temperature_c": _drawn(origin.temperature_c),
+        "loop": {
+            "supply_v": _drawn(origin.supply_v),
+            "probe_current_a": _drawn(origin.probe_current_a),
+        },
         "regions": _regions(evidence.layout),
         "wells": _wells(evidence),
         "sites": _sites(evidence),
@@ -151,11 +155,16 @@ def _sites(evidence: Evidence) -> list[Record]:
             "y_um": _drawn(sites.y_um[row]),
             "well_resistance_ohm": _solved(sites.well_resistance_ohm[row]),
             "substrate_resistance_ohm": _solved(sites.substrate_resistance_ohm[row]),
+            "well_transfer_ohm": _solved(sites.well_transfer_ohm[row]),
+            "substrate_transfer_ohm": _solved(sites.substrate_transfer_ohm[row]),
+            "judged_as": "patch" if sites.patch[row] else "single",
             "beta_pnp": _solved(sites.beta_pnp[row]),
             "beta_npn": _solved(sites.beta_npn[row]),
             "loop_gain_ceiling": _solved(sites.loop_gain_ceiling[row]),
             "loop_gain": _solved(sites.loop_gain[row]),
             "trigger_current_a": _solved(sites.trigger_current_a[row]),
+            "trigger_well_a": _solved(sites.trigger_well_a[row]),
+            "trigger_substrate_a": _solved(sites.trigger_substrate_a[row]),
         }
         for row in range(min(len(sites.ids), LARGEST_SITE_COUNT))
     ]

@@ -45,7 +45,7 @@ def add_panel(
 ) -> float:
     """Draw the column and return the page y of its lower end."""
     group = add(parent, "g", id="panel")
-    y = _add_legend(group, field, left, top)
+    y = _add_legend(group, field, scan.origin.probe_current_a, left, top)
     y = _add_key(group, left, y + 14)
     y = _add_site_list(group, scan.evidence, frame, left, y + 14)
     return _add_finding_list(group, scan.findings, left, y + 14)
@@ -58,10 +58,10 @@ def _heading(parent: Element, x: float, y: float, words: str) -> float:
     return y + 5 + _LINE
 
 
-def _add_legend(parent: Element, field: Field, x: float, top: float) -> float:
+def _add_legend(parent: Element, field: Field, probe_a: float, x: float, top: float) -> float:
     """The bands of loop gain, strongest first."""
     group = add(parent, "g", id="legend")
-    y = _heading(group, x, top, "Loop gain")
+    y = _heading(group, x, top, f"Loop gain at {current(probe_a)} in each transistor")
     for band, colour in reversed(list(zip(BANDS, band_colours(), strict=True))):
         add(group, "rect", x=x, y=y - 11, width=26, height=14, fill=to_hex(colour),
             stroke=INK, stroke_width=0.5, fill_opacity=OPACITY)  # fmt: skip

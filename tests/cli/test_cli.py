@@ -9,6 +9,7 @@ import resource
 import subprocess
 import sys
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -80,9 +81,7 @@ def test_watched_limits_alone_are_status_0(
     scan = synthetic_scan.scan()
     watched = tuple(one for one in scan.findings if one.severity == "watch")
     assert watched
-    quiet = latchscan.scan.Scan(
-        origin=scan.origin, evidence=scan.evidence, findings=watched, caveats=()
-    )
+    quiet = replace(scan, findings=watched, caveats=())
     monkeypatch.setattr(latchscan.scan, "scan", lambda *_: quiet)
     assert scan_into(tmp_path) == 0
 

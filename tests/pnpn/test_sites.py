@@ -12,7 +12,6 @@ import numpy as np
 import pytest
 import shapely
 
-from latchscan.errors import ConvergenceError
 from latchscan.parasitics.model import Transfers
 from latchscan.pnpn.circuit import LoopCircuit, Shunt, Transistor
 from latchscan.pnpn.loop import first_order_triggers, trigger_substrate, trigger_well
@@ -237,12 +236,19 @@ def test_an_untied_well_is_the_worst_site(block: Any, technology: Technology) ->
     assert np.isfinite(result.trigger_current_a[row])
 
 
-def test_a_missing_resistance_is_an_error(block: Any, technology: Technology) -> None:
+def test_a_pair_without_resistance_comes_last_without_numbers(
+    block: Any, technology: Technology
+) -> None:
     transfer = block.transfers.well_ohm.copy()
     transfer[17] = np.nan
     broken = replace(block, transfers=replace(block.transfers, well_ohm=transfer))
-    with pytest.raises(ConvergenceError, match="pair 17: well resistance"):
-        evaluate(broken, technology)
+    whole, result = evaluate(block, technology), evaluate(broken, technology)
+    assert result.pair[-1] == 17
+    assert np.isnan(result.loop_gain[-1])
+    assert np.isnan(result.trigger_current_a[-1])
+    np.testing.assert_array_equal(result.pair[:-1], whole.pair[whole.pair != 17])
+    np.testing.assert_array_equal(result.loop_gain[:-1], whole.loop_gain[whole.pair != 17])
+    assert result.ids[-1] == f"site-{len(result.ids)}"
 
 
 def test_rounding_errors_below_zero_count_as_no_coupling(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -34,5 +35,5 @@ def test_severities_can_be_painted(scan: Scan) -> None:
 
 def test_a_clean_block_says_so() -> None:
     scan = synthetic_scan.scan()
-    clean = type(scan)(origin=scan.origin, evidence=scan.evidence, findings=(), caveats=())
+    clean = replace(scan, findings=(), caveats=())
     assert "Findings: none" in summary(clean, ())
