@@ -405,9 +405,9 @@ PLANTED: list[tuple[str, str, str, str, str]] = [
     (
         "cycle",
         "diffusion: active and not poly",
-        "diffusion: §active and not junction",
+        "diffusion: §active and not channel\n  channel: poly and diffusion",
         "derived.diffusion",
-        "derived from itself, expected no cycle: diffusion -> junction -> diffusion",
+        "derived from itself, expected no cycle: diffusion -> channel -> diffusion",
     ),
     (
         "derived from itself alone",
