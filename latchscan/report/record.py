@@ -43,7 +43,7 @@ def scan_record(scan: Scan) -> Record:
         "format_version": FORMAT_VERSION,
         "tool_version": __version__,
         "layout": {
-            "file": plain_text(origin.layout_name),
+            "file_name": plain_text(origin.layout_name),
             "sha256": origin.layout_sha256,
             "top": plain_text(origin.top),
             "bbox_um": _box(origin.bbox_um),
