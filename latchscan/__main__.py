@@ -12,9 +12,20 @@ def main() -> None:
     # and could make sums depend on their number
     for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS"):
         os.environ.setdefault(name, "1")
+    _open_standard_streams()
     from latchscan.cli import run
 
     sys.exit(run())
+
+
+def _open_standard_streams() -> None:
+    """Lead a closed standard stream nowhere, before a file takes its number."""
+    for number, name in enumerate(("stdin", "stdout", "stderr")):
+        if getattr(sys, name) is None:
+            handle = os.open(os.devnull, os.O_RDWR)
+            if handle != number:
+                os.dup2(handle, number)
+            setattr(sys, name, os.fdopen(number, "r" if name == "stdin" else "w", encoding="utf-8"))
 
 
 if __name__ == "__main__":

@@ -6,18 +6,21 @@ Everything heavy is imported inside the command that needs it, so that ``--help`
 
 from __future__ import annotations
 
+import contextlib
 import math
 import os
+import signal
 import sys
 import traceback
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from pathlib import Path
+from types import FrameType
 from typing import TYPE_CHECKING
 
 import click
 
 from latchscan import __version__
-from latchscan.errors import LatchscanError, OptionError
+from latchscan.errors import LatchscanError, OptionError, OutputError
 
 if TYPE_CHECKING:
     from latchscan.layout.model import Box
@@ -27,8 +30,11 @@ NOTHING_FAILED = 0
 LIMIT_FAILED = 1
 COULD_NOT_START = 2
 COULD_NOT_CONCLUDE = 3
-INTERRUPTED = 130
-"""What shells expect of a program that was stopped from the keyboard (128 + SIGINT)."""
+SIGNALLED = 128
+"""What shells expect of a program that a signal ended: this plus the signal's number."""
+
+MOST_JOBS = 256
+"""More processes than this fit no machine that the work is meant for."""
 
 COLDEST_C, HOTTEST_C = -55.0, 200.0
 """Temperatures that the material models take; the same range as in the technology file."""
@@ -43,24 +49,79 @@ Example:
 def run(arguments: Sequence[str] | None = None) -> int:
     """Run the command line and return its exit status; no exception leaves this function."""
     status = _guarded(arguments)
-    _print("")
+    try:
+        _print("")
+    except OutputError as error:
+        return _complain(error.exit_status, error.message, error.hint)
     return status
 
 
+class _Stopped(BaseException):
+    """A signal asked the program to end; no handler of ordinary errors may swallow it."""
+
+    def __init__(self, number: int) -> None:
+        super().__init__(number)
+        self.number = number
+
+
+def _stop(number: int, _frame: FrameType | None) -> None:
+    """Unwind, so that temporary files and worker processes go as well.
+
+    Some callers send the same signal twice, to the process and to its group; only a second
+    stroke on the keyboard ends the program without tidying up.
+    """
+    for name in _stopping_signals():
+        signal.signal(name, signal.SIG_DFL if name == signal.SIGINT else signal.SIG_IGN)
+    raise _Stopped(number)
+
+
+def _stopping_signals() -> list[signal.Signals]:
+    known = (getattr(signal, name, None) for name in ("SIGINT", "SIGTERM", "SIGHUP"))
+    return [number for number in known if number is not None]
+
+
+@contextlib.contextmanager
+def _stoppable() -> Iterator[None]:
+    """Turn the signals that end a program into `_Stopped`, unless they are ignored."""
+    try:
+        before = {
+            number: signal.signal(number, _stop)
+            for number in _stopping_signals()
+            if signal.getsignal(number) is not signal.SIG_IGN
+        }
+    except ValueError:  # outside the main thread signals are somebody else's
+        before = {}
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
 def _print(text: str) -> None:
-    """Print on standard output; a reader that has gone is no reason to complain."""
+    """Print on standard output; a reader that has gone is no reason to complain.
+
+    Raises
+    ------
+    OutputError
+        It takes nothing, for a reason other than that nobody reads.
+    """
     try:
         click.echo(text, nl=False, color=True)
         sys.stdout.flush()
-    except BrokenPipeError:
+    except OSError as error:
         # give the interpreter's own last flush somewhere to go
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        if not isinstance(error, BrokenPipeError):
+            reason = (error.strerror or str(error)).lower()
+            raise OutputError(f"standard output: cannot be written: {reason}") from error
 
 
 def _guarded(arguments: Sequence[str] | None) -> int:
     """Run and turn every error into one line and a status."""
     try:
-        status = commands.main(args=arguments, prog_name="latchscan", standalone_mode=False)
+        with _stoppable():
+            status = commands.main(args=arguments, prog_name="latchscan", standalone_mode=False)
     except click.exceptions.NoArgsIsHelpError as error:
         _say(error.format_message())
         return COULD_NOT_START
@@ -68,11 +129,17 @@ def _guarded(arguments: Sequence[str] | None) -> int:
         return _complain(COULD_NOT_START, error.format_message(), _usage_hint(error))
     except LatchscanError as error:
         return _complain(error.exit_status, error.message, error.hint)
-    except (click.Abort, KeyboardInterrupt):
-        return _complain(INTERRUPTED, "stopped from the keyboard", "")
+    except (_Stopped, click.Abort, KeyboardInterrupt) as stopped:
+        number = stopped.number if isinstance(stopped, _Stopped) else signal.SIGINT
+        return _complain(SIGNALLED + number, _stopped_words(number), "")
     except Exception as error:  # the door: a traceback would exit with 1, "a limit failed"
         return _complain(COULD_NOT_CONCLUDE, *_unforeseen(error))
     return status if isinstance(status, int) else NOTHING_FAILED
+
+
+def _stopped_words(number: int) -> str:
+    name = signal.Signals(number).name
+    return "stopped from the keyboard" if name == "SIGINT" else f"stopped by {name}"
 
 
 def _unforeseen(error: Exception) -> tuple[str, str]:
@@ -81,6 +148,9 @@ def _unforeseen(error: Exception) -> tuple[str, str]:
         traceback.print_exception(error)
     if isinstance(error, MemoryError):
         return "not enough memory", "give a --window or fewer --jobs"
+    if isinstance(error, OSError) and error.strerror:
+        where = f"{error.filename}: " if error.filename else ""
+        return f"{where}the system refused: {error.strerror.lower()}", ""
     return (
         f"internal: {type(error).__name__}: {error}",
         "set LATCHSCAN_DEBUG=1 for a traceback to report",
@@ -93,12 +163,13 @@ def _usage_hint(error: click.ClickException) -> str:
 
 
 def _say(text: str) -> None:
-    click.echo(text, err=True)
+    with contextlib.suppress(OSError):  # nowhere left to complain; the status still tells
+        click.echo(text, err=True)
 
 
 def _complain(status: int, message: str, hint: str) -> int:
     """Print an error and its hint as one line; return the status it means."""
-    whole = f"{message} ({hint})" if hint else message
+    whole = f"{message.rstrip('.')} ({hint})" if hint else message
     _say("latchscan: error: " + " ".join(whole.split()))
     return status
 
@@ -108,6 +179,16 @@ def available_cores() -> int:
     if hasattr(os, "sched_getaffinity"):
         return len(os.sched_getaffinity(0))
     return os.cpu_count() or 1
+
+
+def given_path(ctx: click.Context, param: click.Parameter, value: str) -> Path:
+    """The path as written; empty text, which would mean the current directory, fails.
+
+    What else may be wrong with a path is for its reader to say.
+    """
+    if not value:
+        raise click.BadParameter("expected a path, got nothing", ctx, param)
+    return Path(value)
 
 
 @click.group(
@@ -123,7 +204,7 @@ def commands() -> None:
 
 
 @commands.command(epilog=_EXAMPLE)
-@click.argument("layout", type=click.Path(path_type=Path))
+@click.argument("layout", callback=given_path)
 @click.option(
     "--tech",
     required=True,
@@ -135,7 +216,7 @@ def commands() -> None:
     "out_dir",
     required=True,
     metavar="DIR",
-    type=click.Path(path_type=Path),
+    callback=given_path,
     help="Directory for scan.json, emitters.csv and heatmap.svg.",
 )
 @click.option("--top", metavar="CELL", help="Top cell, when the layout has several.")
@@ -154,7 +235,7 @@ def commands() -> None:
 )
 @click.option(
     "--jobs",
-    type=click.IntRange(min=1),
+    type=click.IntRange(min=1, max=MOST_JOBS),
     metavar="N",
     help="Processes to work in; all available cores unless given.",
 )

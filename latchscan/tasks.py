@@ -7,12 +7,19 @@ no result can depend on scheduling.
 from __future__ import annotations
 
 import multiprocessing
+import os
+import signal
 import sys
+import threading
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Executor, ProcessPoolExecutor
+from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from multiprocessing.connection import wait
 from typing import Protocol, TypeVar
+
+from latchscan.errors import AnalysisError
 
 Item = TypeVar("Item")
 Result = TypeVar("Result")
@@ -51,6 +58,11 @@ class Workers:
         """Apply `function` to every item and return the results in order.
 
         `function` must be importable by name (a worker may be another process).
+
+        Raises
+        ------
+        AnalysisError
+            A worker process was lost.
         """
         self.progress.begin(stage, len(items))
         results: list[Result] = []
@@ -59,9 +71,18 @@ class Workers:
             if self.executor is None or len(items) < 2
             else self.executor.map(function, items)
         )
-        for result in source:
-            results.append(result)
-            self.progress.step()
+        try:
+            for result in source:
+                results.append(result)
+                self.progress.step()
+        except BrokenProcessPool:
+            # the pool asks the others to end by a signal that they leave to the parent
+            for process in multiprocessing.active_children():
+                process.kill()
+            raise AnalysisError(
+                f"{stage}: a worker process was lost",
+                hint="often for want of memory: give a --window or fewer --jobs",
+            ) from None
         return results
 
 
@@ -73,5 +94,28 @@ def open_workers(jobs: int, progress: Progress) -> Iterator[Workers]:
         return
     # fork shares the imported modules; elsewhere the platform's default is the safe one
     context = multiprocessing.get_context("fork" if sys.platform == "linux" else None)
-    with ProcessPoolExecutor(max_workers=jobs, mp_context=context) as executor:
-        yield Workers(executor=executor, progress=progress)
+    with ProcessPoolExecutor(
+        max_workers=jobs, mp_context=context, initializer=_begin_worker
+    ) as executor:
+        try:
+            yield Workers(executor=executor, progress=progress)
+        except BaseException:
+            # nobody wants the results any more: leaving waits only for what is being worked on
+            executor.shutdown(wait=True, cancel_futures=True)
+            raise
+
+
+def _begin_worker() -> None:
+    """Leave signals to the parent, which ends its workers, and end with it if it is killed."""
+    for name in ("SIGINT", "SIGTERM", "SIGHUP"):
+        number = getattr(signal, name, None)
+        if number is not None:
+            signal.signal(number, signal.SIG_IGN)
+    threading.Thread(target=_leave_with_parent, daemon=True).start()
+
+
+def _leave_with_parent() -> None:
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        wait([parent.sentinel])
+        os._exit(1)

@@ -48,6 +48,18 @@ class DrawnBlock:
         names = {pair: name for name, pair in LAYERS.items()}
         return {pair: self._columns(names.get(pair, ""), box_dbu) for pair in pairs}
 
+    def near(
+        self, boxes_dbu: np.ndarray, pairs: Iterable[tuple[int, int]]
+    ) -> dict[tuple[int, int], PolygonColumns]:
+        found = [self.window(tuple(box), pairs) for box in boxes_dbu.tolist()]
+        return {
+            pair: PolygonColumns(
+                np.concatenate([columns[pair].points for columns in found]),
+                np.cumsum([0, *(n for c in found for n in np.diff(c[pair].first).tolist())]),
+            )
+            for pair in pairs
+        }
+
     def labels(self, pairs: Iterable[tuple[int, int]]) -> tuple[Label, ...]:
         return self.texts
 

@@ -20,7 +20,7 @@ RANK = {
     "errors": 0,
     "constants": 0,
     "caveats": 0,
-    "tasks": 0,
+    "tasks": 0.5,
     "technology": 1,
     "layout": 2,
     "fields": 2,

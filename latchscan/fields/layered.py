@@ -169,9 +169,14 @@ class LayeredKernel:
         """
         rows, columns = _near_pairs(receivers, sources)
         result = self._far_between(receivers, sources)
+        same = receivers is sources
+        if same:
+            rows, columns = rows[rows <= columns], columns[rows <= columns]
         a, b = receivers[rows], sources[columns]
         half_space = self.resistivity_ohm_um / (2.0 * np.pi) * inverse_distance_between(a, b)
         result[rows, columns] = half_space + self._correction_near(a, b)
+        if same:
+            result[columns, rows] = result[rows, columns]
         return result
 
     def _far_between(self, receivers: Floats, sources: Floats) -> Floats:

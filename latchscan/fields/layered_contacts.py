@@ -38,7 +38,9 @@ def graded_cuts(length: float, count: int) -> Floats:
     return np.asarray(length * (1.0 + np.sign(t) * graded) / 2.0, dtype=np.float64)
 
 
-def graded_patches(boxes: Floats, count: int, aspect: float = 4.0) -> tuple[Floats, Ints]:
+def graded_patches(
+    boxes: Floats, count: int, aspect: float = 4.0, least_um: Floats | None = None
+) -> tuple[Floats, Ints]:
     """Patches of rectangles, graded towards all four sides.
 
     Parameters
@@ -48,6 +50,8 @@ def graded_patches(boxes: Floats, count: int, aspect: float = 4.0) -> tuple[Floa
     count
         Patches across the narrow side; at least 2.  The long side gets more, so that an
         inner patch is at most `aspect` times as long as the narrow side's mean patch.
+    least_um
+        (n,) length that inner patches may have at any rate; 0 where None.
 
     Returns
     -------
@@ -55,10 +59,12 @@ def graded_patches(boxes: Floats, count: int, aspect: float = 4.0) -> tuple[Floa
         (p, 4) and the index of the rectangle each came from, (p,).
     """
     parts, owner = [], []
+    least = np.zeros(len(boxes)) if least_um is None else least_um
     for index, (x0, y0, x1, y1) in enumerate(boxes):
         narrow = min(x1 - x0, y1 - y0)
+        most = max(aspect * narrow / count, float(least[index]))
         xs, ys = (
-            side0 + _side_cuts(side1 - side0, narrow, count, aspect)
+            side0 + _side_cuts(side1 - side0, narrow, count, most)
             for side0, side1 in ((x0, x1), (y0, y1))
         )
         left, low = np.meshgrid(xs[:-1], ys[:-1], indexing="ij")
@@ -68,13 +74,13 @@ def graded_patches(boxes: Floats, count: int, aspect: float = 4.0) -> tuple[Floa
     return np.concatenate(parts), np.concatenate(owner)
 
 
-def _side_cuts(length: float, narrow: float, count: int, aspect: float) -> Floats:
+def _side_cuts(length: float, narrow: float, count: int, most: float) -> Floats:
     if length <= 1.5 * narrow:
         return graded_cuts(length, count)
     ends = graded_cuts(narrow, count)
     half = ends[ends <= narrow / 2.0 * (1.0 + 1e-9)]
     middle = length - 2.0 * half[-1]
-    pieces = max(int(np.ceil(middle / (aspect * narrow / count))), 1)
+    pieces = max(int(np.ceil(middle / most)), 1)
     inner = half[-1] + middle * np.arange(1, pieces) / pieces
     return np.concatenate([half, inner, length - half[::-1]])
 

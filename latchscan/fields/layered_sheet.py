@@ -18,11 +18,11 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import coo_matrix, csc_matrix, hstack
-from scipy.sparse.linalg import splu
+from scipy.sparse import coo_matrix, csc_matrix, csr_matrix, hstack
 
 from latchscan.errors import ConvergenceError
 from latchscan.fields.layered import LayeredKernel
+from latchscan.fields.layered_elimination import elimination_order, solve_network
 from latchscan.fields.layered_network import GridLines, Network, SheetOnBulk, cell_weights
 from latchscan.fields.rectangles import mean_log_within
 
@@ -46,8 +46,8 @@ class SheetPotentials:
     change_ohm
         (s,) change of the mean over the source itself with fewer blocks.
     rim_ohm
-        (s,) largest difference of a potential on the grid's rim from the rim's mean: what
-        would drive current beyond it.
+        (s,) largest difference of a potential on the grid's rim from that beyond it: what
+        would drive current there.
     block_boxes, block_current, level
         (b, 4), (b, s) and (s,): rectangles, currents into the conductor [A], and the free
         constant of a conductor with insulated bottom [ohm].
@@ -96,26 +96,34 @@ def solve_on_bulk(
     forced = cell_weights(network, lines, *sources)
     heard = cell_weights(network, lines, *receivers)
     count, width = forced.shape[1], len(boxes)
-    factors = splu(network.matrix, permc_spec="MMD_AT_PLUS_A", options={"SymmetricMode": True})
     # all patches of a contact share one column
     column, first = _distinct(problem, width)
-    answer = factors.solve(np.asfortranarray(hstack([forced, spread[:, first]]).toarray()))
-    alone, back = answer[:, :count], answer[:, count:][:, column]
+    shared = spread[:, first]
+    right = hstack([forced, shared]).tocsc()
+    order = elimination_order(network, right)
+    answer = solve_network(network, right[:, order])
+    both = np.empty((shared.shape[1], len(order)))
+    both[:, order] = shared.T.tocsr() @ answer
     bulk = kernel.between(boxes, boxes)
-    matrix, right = _agreement(spread.T @ back + bulk, spread.T @ alone, kernel.floating)
-    current = _solved(matrix, right)
+    matrix, seen = _agreement(
+        both[:, count:][np.ix_(column, column)] + bulk, both[column, :count], kernel.floating
+    )
+    current = _solved(matrix, seen)
     joint = _joining(network, lines, len(matrix))
-    fewer = joint @ _solved(joint.T @ matrix @ joint, joint.T @ right)
-    own = (forced.T @ back) @ (current - fewer)[:width]
-    mean = heard.T @ alone - (heard.T @ back) @ current[:width]
+    fewer = joint @ _solved(joint.T @ matrix @ joint, joint.T @ seen)
+    # one current a distinct column, below the sources' own: potentials are answer @ driven
+    change = _summed(column, (current - fewer)[:width])
+    driven = np.concatenate([np.eye(count), -_summed(column, current[:width])])[order]
+    mean = (heard.T.tocsr() @ answer) @ driven
+    own = np.einsum("bi,bi->i", both[:, :count], change)
     mean[np.arange(count), np.arange(count)] += _self_terms(network, lines, sources, forced) / (
         2.0 * np.pi * problem.conductance_s
     )
     return SheetPotentials(
         mean_ohm=mean,
-        peak_ohm=_peaks(forced, alone, back, current[:width]),
-        change_ohm=np.abs(np.diagonal(own)),
-        rim_ohm=_rim_spread(network, alone, back, current[:width]),
+        peak_ohm=_peaks(forced, answer, driven),
+        change_ohm=np.abs(own),
+        rim_ohm=_rim_spread(network, answer, driven, floating=kernel.floating),
         block_boxes=boxes,
         block_current=current[:width],
         level=current[width] if kernel.floating else np.zeros(count),
@@ -130,18 +138,28 @@ def _distinct(problem: SheetOnBulk, width: int) -> tuple[Ints, Ints]:
     return column.astype(np.int64), first.astype(np.int64)
 
 
-def _rim_spread(network: Network, alone: Floats, back: Floats, current: Floats) -> Floats:
-    """Largest difference of the grid's rim from its mean potential; 0 without a rim."""
+def _summed(column: Ints, current: Floats) -> Floats:
+    """Currents of all blocks that share a column, added up."""
+    member = csr_matrix((np.ones(len(column)), (column, np.arange(len(column)))))
+    return np.asarray(member @ current, dtype=np.float64)
+
+
+def _rim_spread(network: Network, answer: Floats, driven: Floats, *, floating: bool) -> Floats:
+    """Largest difference of the grid's rim from what lies beyond; 0 without a rim.
+
+    Far away a conductor with contacted bottom is at 0; another takes on the rim's mean.
+    """
     if not network.rim.any():
-        return np.zeros(alone.shape[1])
-    potential = alone[network.rim] - back[network.rim] @ current
-    return np.asarray(np.abs(potential - potential.mean(axis=0)).max(axis=0), dtype=np.float64)
+        return np.zeros(driven.shape[1])
+    potential = answer[network.rim] @ driven
+    beyond = potential.mean(axis=0) if floating else 0.0
+    return np.asarray(np.abs(potential - beyond).max(axis=0), dtype=np.float64)
 
 
-def _peaks(forced: csc_matrix, alone: Floats, back: Floats, current: Floats) -> Floats:
+def _peaks(forced: csc_matrix, answer: Floats, driven: Floats) -> Floats:
     """Largest potential of the grid cells that each source covers."""
     cell, source = forced.nonzero()
-    value = alone[cell, source] - np.einsum("ib,bi->i", back[cell], current[:, source])
+    value = np.einsum("ib,bi->i", answer[cell], driven[:, source])
     peak = np.full(forced.shape[1], -np.inf)
     np.maximum.at(peak, source, value)
     return peak

@@ -22,7 +22,6 @@ from latchscan.fields.sheet_kernels import (
     Lines,
     Pieces,
     area_means,
-    exact_layers,
     panel_layers,
 )
 from latchscan.fields.sheet_panels import Panels, SheetProblem
@@ -126,10 +125,8 @@ class Boundary:
     def angle(self, points: Floats, domain: int) -> Floats:
         """(m,) factor of psi at points of the closed domain; less than 2 pi rho on an edge."""
         lines = self.sides[domain].lines
-        m, n = len(points), len(lines.length)
-        seen = np.repeat(points, n, axis=0)
-        _, double = exact_layers(seen, lines.take(np.tile(np.arange(n), m)))
-        angle: Floats = double.reshape(m, n).sum(axis=1) * self.share[domain]
+        _, double = panel_layers(points, lines, single=False, double=True)
+        angle: Floats = double.sum(axis=1) * self.share[domain]
         return angle
 
     def point_rows(self, points: Floats, domain: int) -> Floats:

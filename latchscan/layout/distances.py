@@ -13,7 +13,7 @@ from itertools import pairwise
 import numpy as np
 import shapely
 
-from latchscan.layout.farthest import Farthest, farthest_points
+from latchscan.layout.farthest import Farthest, farthest_in_crowds, farthest_points
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     P_IN_NWELL,
@@ -31,10 +31,11 @@ from latchscan.tasks import Workers
 TAP_DISTANCE_STAGE = "tap distances"
 TAP_REACH_STAGE = "tap reach"
 EMITTERS_PER_TASK = 20_000
-CONTACTS_PER_TASK = 5_000
+CONTACTS_PER_TASK = 10_000
 """Sizes of a task; fixed, so that results do not depend on the number of workers."""
 
 _Task = tuple[Geometries, Ints, Geometries, Ints]
+_TapTask = tuple[Geometries, Floats, Ints]
 
 
 def measure_distances(layout: Layout, workers: Workers) -> Distances:
@@ -69,7 +70,7 @@ def measure_distances(layout: Layout, workers: Workers) -> Distances:
     # emitters are measured faster here than their polygons travel to another process
     here = Workers(progress=workers.progress)
     emitter = _joined(here.map(TAP_DISTANCE_STAGE, _measure, _emitter_tasks(layout)))
-    tap = _joined(workers.map(TAP_REACH_STAGE, _measure, _tap_tasks(layout.taps)))
+    tap = _joined(workers.map(TAP_REACH_STAGE, _reach, _tap_tasks(layout.taps)))
     return Distances(
         tap_distance_um=emitter.distance_um,
         farthest_um=emitter.at_um,
@@ -92,22 +93,25 @@ def _emitter_tasks(layout: Layout) -> list[_Task]:
     return tasks
 
 
-def _tap_tasks(taps: Taps) -> list[_Task]:
-    """Taps in runs with about as many contacts, each tap a group of its own."""
+def _tap_tasks(taps: Taps) -> list[_TapTask]:
+    """Taps in runs with about as many contacts each, and the tap of each contact."""
     offsets = taps.contact_first
     run = offsets[:-1] // CONTACTS_PER_TASK
     limits = np.flatnonzero(np.diff(run, prepend=-1, append=np.iinfo(np.int64).max))
     tasks = []
     for first, end in pairwise(limits):
         contacts = taps.contact_box_um[offsets[first] : offsets[end]]
-        rows = np.arange(end - first)
-        owner = np.repeat(rows, np.diff(offsets[first : end + 1]))
-        tasks.append((taps.polygons[first:end], rows, shapely.box(*contacts.T), owner))
+        owner = np.repeat(np.arange(end - first), np.diff(offsets[first : end + 1]))
+        tasks.append((taps.polygons[first:end], contacts, owner))
     return tasks
 
 
 def _measure(task: _Task) -> Farthest:
     return farthest_points(*task)
+
+
+def _reach(task: _TapTask) -> Farthest:
+    return farthest_in_crowds(*task)
 
 
 def _joined(parts: list[Farthest]) -> Farthest:

@@ -1,7 +1,7 @@
 """One window: the technology's steps run on the polygons of a small box.
 
 In: a `Program` and the window's drawn layers, relative to the window's corner [grid steps].
-Out: the rings of every region inside the window, and the contacts that may lie on a tap.
+Out: the rings of every region inside the window, and the boxes where contacts are on a tap.
 """
 
 from __future__ import annotations
@@ -10,8 +10,8 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
-from numpy.typing import NDArray
 
+from latchscan.layout.contacts import NO_BOXES, meets_any
 from latchscan.layout.derivation import MITRE_LIMIT, TAPS, Program, Step
 from latchscan.layout.geometry import (
     SUBGRID,
@@ -22,15 +22,13 @@ from latchscan.layout.geometry import (
     draw_rings,
     grown,
     merged,
-    overlapping,
     to_rings,
     wide_parts,
     without,
 )
 from latchscan.layout.model import Ints
+from latchscan.layout.slabs import cut_upright, upright_rings
 from latchscan.layout.stitching import Rings, join_rings, select_rings
-
-NO_BOXES = np.zeros((0, 4), dtype=np.int64)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -61,8 +59,6 @@ class Window:
         The part of the margin frame inside the analysed box: what a complement is part of.
     narrow, wide
         Layer name -> what is drawn in the frame, in the margin frame.
-    contact_boxes
-        (n, 4) boxes of the contacts that meet the frame, unclipped.
     """
 
     frame: tuple[int, int, int, int]
@@ -70,7 +66,6 @@ class Window:
     block_frame: tuple[int, int, int, int]
     narrow: Mapping[str, DrawnLayer]
     wide: Mapping[str, DrawnLayer]
-    contact_boxes: Ints
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -81,19 +76,23 @@ class WindowResult:
     ----------
     regions
         Region name -> rings (holes on slits); empty regions are left out.
-    sure_contacts
-        (n, 4) boxes of contacts that overlap a rectangular tap.
-    unsure_contacts
-        (m, 4) boxes of contacts that overlap the bounding box of another tap.
+    tap_boxes
+        (n, 4) rectangles that make up the taps.
+    slanted_tap_boxes
+        (m, 4) bounding boxes of the taps that are not made of rectangles.
+    contacts
+        (k, 4) boxes of contacts that overlap any of these boxes, where contacts are derived
+        by an expression; contacts that are drawn are fetched once the taps are known.
     """
 
     regions: Mapping[str, Rings]
-    sure_contacts: Ints
-    unsure_contacts: Ints
+    tap_boxes: Ints
+    slanted_tap_boxes: Ints
+    contacts: Ints
 
 
 def evaluate(program: Program, window: Window, database_unit_um: float) -> WindowResult:
-    """Regions and tap contacts of one window."""
+    """Regions and tap boxes of one window, and contacts where they are derived."""
     run = _Run(program=program, window=window, steps_per_um=SUBGRID / database_unit_um)
     regions = {}
     for name, index in program.regions:
@@ -101,32 +100,28 @@ def evaluate(program: Program, window: Window, database_unit_um: float) -> Windo
         if rings.count:
             regions[name] = rings
     taps = join_rings([regions[name] for name in TAPS if name in regions])
-    sure, unsure = _tap_contacts(run, taps)
-    return WindowResult(regions=regions, sure_contacts=sure, unsure_contacts=unsure)
-
-
-def _tap_contacts(run: _Run, taps: Rings) -> tuple[Ints, Ints]:
     if not taps.count:
-        return NO_BOXES, NO_BOXES
-    contacts = run.window.contact_boxes
-    if not run.program.contact_layers:
-        contacts = bounding_boxes(to_rings(run.drawn(run.program.contact)))
-    if not len(contacts):
-        return NO_BOXES, NO_BOXES
-    plain = np.diff(taps.first) == 4
-    plain &= _are_boxes(taps, plain)
-    on_plain = overlapping(contacts, bounding_boxes(select_rings(taps, plain))).any(axis=1)
-    on_other = overlapping(contacts, bounding_boxes(select_rings(taps, ~plain))).any(axis=1)
-    return contacts[on_plain], contacts[on_other & ~on_plain]
+        return WindowResult(
+            regions=regions, tap_boxes=NO_BOXES, slanted_tap_boxes=NO_BOXES, contacts=NO_BOXES
+        )
+    upright = upright_rings(taps.points, taps.first)
+    plain = select_rings(taps, upright)
+    boxes, _ = cut_upright(plain.points, plain.first, np.arange(plain.count))
+    slanted = bounding_boxes(select_rings(taps, ~upright))
+    return WindowResult(
+        regions=regions,
+        tap_boxes=boxes,
+        slanted_tap_boxes=slanted,
+        contacts=_derived_contacts(run, np.concatenate([boxes, slanted])),
+    )
 
 
-def _are_boxes(rings: Rings, four: NDArray[np.bool_]) -> NDArray[np.bool_]:
-    """(r,) whether the rings of four points, marked by `four`, are upright rectangles."""
-    found = np.zeros(rings.count, dtype=np.bool_)
-    corners = select_rings(rings, four).points.reshape(-1, 4, 2)
-    turns = np.roll(corners, -1, axis=1) - corners
-    found[four] = np.all(np.any(turns == 0, axis=2), axis=1)
-    return found
+def _derived_contacts(run: _Run, tap_boxes: Ints) -> Ints:
+    """Boxes of the contacts that an expression gives, those that may lie on a tap."""
+    if run.program.contact_layers:
+        return NO_BOXES
+    contacts = bounding_boxes(to_rings(run.drawn(run.program.contact)))
+    return contacts[meets_any(contacts, tap_boxes)]
 
 
 @dataclass(slots=True, kw_only=True)

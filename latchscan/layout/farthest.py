@@ -24,9 +24,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.errors import ResolutionError
-from latchscan.layout.convex import Pieces, add_crossings, cut_convex, nearest_on_pieces, upper_part
+from latchscan.layout.convex import (
+    Pieces,
+    add_crossings,
+    box_corners,
+    cut_convex,
+    nearest_on_pieces,
+    upper_part,
+)
+from latchscan.layout.crowds import cut_crowds
 from latchscan.layout.model import Floats, Geometries, Ints, frozen
-from latchscan.layout.targets import Targets, place_targets
+from latchscan.layout.targets import Targets, place_pieces, place_targets
 
 RESOLUTION_UM = 5e-9
 """A piece is decided when its largest distance is known this well [um]."""
@@ -171,38 +179,107 @@ def farthest_points(
             targets[wanted],
             np.searchsorted(groups, target_group[wanted]),
         )
-        distance[measured], at[measured], piece = _search(
-            cut_convex(shapes[measured]), members, placed
-        )
+        pieces = cut_convex(shapes[measured])
+        unknown = np.full(len(pieces.owner), -1)
+        distance[measured], at[measured], piece = _search(pieces, members, placed, unknown)
         nearest[measured] = nearest_on_pieces(at[measured], placed.corners[piece])[1]
     return Farthest(distance_um=frozen(distance), at_um=frozen(at), nearest_um=frozen(nearest))
 
 
-def _search(pieces: Pieces, members: Ints, targets: Targets) -> tuple[Floats, Floats, Ints]:
-    """Run the branch and bound; distance, point and target piece of each shape."""
+def farthest_in_crowds(shapes: Geometries, boxes: Floats, owner: Ints) -> Farthest:
+    """The same for shapes that are full of small boxes, each shape seeing its own only.
+
+    Parameters
+    ----------
+    shapes
+        (n,) valid shapely polygons [um].
+    boxes
+        (m, 4) x0, y0, x1, y1 [um], sorted by shape.
+    owner
+        (m,) the shape of each.
+
+    Raises
+    ------
+    GeometryError, ResolutionError
+        As `farthest_points`.
+    """
+    distance = np.full(len(shapes), np.nan)
+    at, nearest = np.full((len(shapes), 2), np.nan), np.full((len(shapes), 2), np.nan)
+    measured, group = np.unique(owner, return_inverse=True)
+    if len(measured):
+        members = np.arange(len(measured))
+        placed = place_pieces(shapes[measured], members, box_corners(boxes), group)
+        pieces, near = cut_crowds(shapes[measured], boxes, group)
+        distance[measured], at[measured], piece = _search(pieces, members, placed, near)
+        nearest[measured] = nearest_on_pieces(at[measured], placed.corners[piece])[1]
+    return Farthest(distance_um=frozen(distance), at_um=frozen(at), nearest_um=frozen(nearest))
+
+
+def _search(
+    pieces: Pieces, members: Ints, targets: Targets, near: Ints
+) -> tuple[Floats, Floats, Ints]:
+    """Run the branch and bound; distance, point and target piece of each shape.
+
+    `near` holds for each piece some target piece of its group that is not far, or -1.
+    """
     records = _Records(len(members))
-    corners = pieces.corners_um
-    shape = pieces.owner
-    group = members[shape]
-    guess = targets.nearest(corners.mean(axis=1), group)[0]
-    near, value = targets.nearer(corners.reshape(-1, 2), np.repeat(group, 4), np.repeat(guess, 4))
-    front = _Front(
-        corners=corners,
-        near=near.reshape(-1, 4),
-        value=value.reshape(-1, 4),
-        shape=shape,
-        gap=np.full(len(shape), np.inf),
-    )
+    front = _first_front(pieces, members, targets, near, records)
     for _ in range(MAX_LEVELS):
-        _record_corners(records, front)
         # nearest to one target at every corner: the distance is convex, the corners decide
         front = front.take(np.any(front.near != front.near[:, :1], axis=1))
         if not len(front.shape):
             return records.choose()
         front = _next_level(front, members, targets, records)
+        _record_corners(records, front)
     raise ResolutionError(
         f"farthest points: {len(front.shape)} pieces still undecided after {MAX_LEVELS} cuts; "
         f"expected bounds to meet within {RESOLUTION_UM} um"
+    )
+
+
+def _first_front(
+    pieces: Pieces, members: Ints, targets: Targets, near: Ints, records: _Records
+) -> _Front:
+    """Measure, for each shape, its most promising piece and then those that can beat it."""
+    corners, shape = pieces.corners_um, pieces.owner
+    guess = near.copy()
+    unknown = guess < 0
+    guess[unknown] = targets.nearest(corners[unknown].mean(axis=1), members[shape[unknown]])[0]
+    if len(shape) == len(members):
+        front = _measured(pieces, np.arange(len(shape)), guess, members, targets)
+        _record_corners(records, front)
+        return front
+    reach = nearest_on_pieces(corners.reshape(-1, 2), np.repeat(targets.corners[guess], 4, axis=0))
+    upper = reach[0].reshape(-1, 4).max(axis=1)
+    order = np.lexsort((-upper, shape))
+    leading = order[np.searchsorted(shape[order], np.arange(len(members)))]
+    first = _measured(pieces, leading, guess, members, targets)
+    _record_corners(records, first)
+    waiting = upper >= records.best[shape] - TIE_UM
+    waiting[leading] = False
+    rest = _measured(pieces, np.flatnonzero(waiting), guess, members, targets)
+    _record_corners(records, rest)
+    return _Front(
+        corners=np.concatenate([first.corners, rest.corners]),
+        near=np.concatenate([first.near, rest.near]),
+        value=np.concatenate([first.value, rest.value]),
+        shape=np.concatenate([first.shape, rest.shape]),
+        gap=np.concatenate([first.gap, rest.gap]),
+    )
+
+
+def _measured(pieces: Pieces, rows: Ints, guess: Ints, members: Ints, targets: Targets) -> _Front:
+    """Some of the pieces with the nearest target piece of every corner."""
+    corners, shape = pieces.corners_um[rows], pieces.owner[rows]
+    near, value = targets.nearer(
+        corners.reshape(-1, 2), np.repeat(members[shape], 4), np.repeat(guess[rows], 4)
+    )
+    return _Front(
+        corners=corners,
+        near=near.reshape(-1, 4),
+        value=value.reshape(-1, 4),
+        shape=shape,
+        gap=np.full(len(shape), np.inf),
     )
 
 

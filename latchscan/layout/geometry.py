@@ -13,7 +13,6 @@ from typing import Any
 import gdstk
 import numpy as np
 import shapely
-from numpy.typing import NDArray
 
 from latchscan.layout.model import Floats, Geometries, Ints, frozen
 from latchscan.layout.stitching import Rings, select_rings, signed_areas
@@ -163,10 +162,3 @@ def _hole_owners(
     order = np.lexsort((shell_areas[shell], hole))
     _, leading = np.unique(hole[order], return_index=True)
     return np.asarray(shell[order][leading])
-
-
-def overlapping(boxes: Ints, others: Ints) -> NDArray[np.bool_]:
-    """(n, m) whether boxes overlap with area."""
-    one, two = boxes[:, np.newaxis, :], others[np.newaxis, :, :]
-    found = (one[..., :2] < two[..., 2:]) & (two[..., :2] < one[..., 2:])
-    return np.asarray(found.all(axis=-1))

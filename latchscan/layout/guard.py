@@ -7,6 +7,7 @@ and turns whatever becomes of that process into tables or one clear error.
 
 from __future__ import annotations
 
+import errno
 import gzip
 import hashlib
 import json
@@ -35,6 +36,7 @@ PIECE_BYTES = 1 << 20
 GZIP_MAGIC = b"\x1f\x8b"
 OASIS_MAGIC = b"%SEMI-OASIS\r\n"
 GDSII_HEADER = b"\x00\x06\x00\x02"
+NO_ROOM_ERRORS = (errno.ENOSPC, errno.EFBIG, errno.EDQUOT)
 HINT = "latchscan reads GDSII and OASIS files, either of them gzipped"
 
 
@@ -60,6 +62,8 @@ def _reason(error: OSError) -> str:
         return "this is a directory; expected a layout file"
     if isinstance(error, PermissionError):
         return "no permission to read this file"
+    if error.errno in NO_ROOM_ERRORS:
+        return f"no room to work on it in {tempfile.gettempdir()}: {error.strerror}"
     return f"cannot be read: {error.strerror or error}"
 
 
@@ -169,6 +173,9 @@ def _read_in_child(
         )
     except subprocess.TimeoutExpired:
         raise LayoutError(f"{path}: reading did not end within {seconds:.0f} s") from None
+    except OSError as error:
+        # about this program, not about the file
+        raise LayoutError(f"{path}: its reader could not be started: {error.strerror}") from None
     if done.returncode != 0:
         raise LayoutError(f"{path}: {_death(done)}", hint=HINT)
     return load_tables(folder / "tables.npz")

@@ -26,6 +26,7 @@ from latchscan.layout.model import (
     Taps,
     frozen,
 )
+from latchscan.layout.slabs import upright_parts
 from latchscan.technology.model import Labels, Technology
 
 MARKED = "marker"
@@ -198,24 +199,21 @@ def _contacts_on(taps: Geometries, contact_box_um: Floats) -> tuple[Ints, Ints]:
     """(tap, contact) pairs that overlap with area, grouped by tap."""
     if not len(taps) or not len(contact_box_um):
         return np.zeros(0, dtype=np.int64), np.zeros(0, dtype=np.int64)
-    boxes = shapely.box(*contact_box_um.T)
-    tap, contact = shapely.STRtree(boxes).query(taps, predicate="intersects")
-    centre = (contact_box_um[:, :2] + contact_box_um[:, 2:])[contact] / 2.0
-    x0, y0, x1, y1 = shapely.bounds(taps)[tap].T
-    sure = _is_box(taps)[tap] & (x0 < centre[:, 0]) & (centre[:, 0] < x1)
-    sure &= (y0 < centre[:, 1]) & (centre[:, 1] < y1)
-    asked = np.flatnonzero(~sure)
-    shared = shapely.area(shapely.intersection(taps[tap[asked]], boxes[contact[asked]]))
-    sure[asked] = shared > 0.0
-    tap, contact = tap[sure], contact[sure]
+    tree = shapely.STRtree(shapely.box(*contact_box_um.T))
+    parts, owner, others = upright_parts(taps)
+    part, on_part = tree.query(shapely.box(*parts.T))
+    box, side = contact_box_um[on_part], parts[part]
+    shared = ((box[:, :2] < side[:, 2:]) & (side[:, :2] < box[:, 2:])).all(axis=1)
+    row, on_other = tree.query(taps[others], predicate="intersects")
+    area = shapely.area(shapely.intersection(taps[others[row]], tree.geometries[on_other]))
+    tap = np.concatenate([owner[part[shared]], others[row[area > 0.0]]])
+    contact = np.concatenate([on_part[shared], on_other[area > 0.0]])
     order = np.lexsort((contact, tap))
-    return tap[order], contact[order]
-
-
-def _is_box(polygons: Geometries) -> NDArray[np.bool_]:
-    x0, y0, x1, y1 = shapely.bounds(polygons).reshape(-1, 4).T
-    full = (x1 - x0) * (y1 - y0)
-    return np.asarray(np.abs(shapely.area(polygons) - full) <= 1e-9 * full)
+    tap, contact = tap[order], contact[order]
+    # a contact may lie on two rectangles of one tap
+    fresh = np.ones(len(tap), dtype=np.bool_)
+    fresh[1:] = (tap[1:] != tap[:-1]) | (contact[1:] != contact[:-1])
+    return tap[fresh], contact[fresh]
 
 
 def _covered_area(polygons: Geometries, cover: Geometries) -> Floats:

@@ -20,6 +20,11 @@ from latchscan.layout.model import Floats, Geometries, Ints, frozen
 
 TIE_UM = 1e-6
 """Distances are ordered in steps of this size, so that rounding decides no order [um]."""
+FIRST_SHARE = 0.7
+"""Share of the expected radius that is asked first: it starts at the nearest target (measured)."""
+FEW_IN_A_SQUARE = 4
+MOST_SQUARES_A_SIDE = 32
+"""Squares in which it is seen where targets are at all; coarse, so that few stay empty."""
 SOURCES_AT_ONCE = 4_000
 """Polygons asked together: bounds the memory of one answer."""
 
@@ -157,8 +162,19 @@ def _distances(sources: _Set, source: Ints, targets: _Set, target: Ints) -> Floa
 
 
 def _margin(boxes: Floats, count: int) -> float:
-    """Radius within which `count` targets lie if they are spread evenly [um]."""
-    width, height = boxes[:, 2:].max(axis=0) - boxes[:, :2].min(axis=0)
+    """Radius within which `count` targets lie where targets are spread evenly [um]."""
+    low, high = boxes[:, :2].min(axis=0), boxes[:, 2:].max(axis=0)
+    width, height = high - low
     share = count / len(boxes)
+    area = width * height * _occupied_share(boxes, low, high)
     # a single row of targets has next to no area
-    return float(max(np.sqrt(width * height * share / np.pi), max(width, height) * share / 2.0))
+    radius = max(np.sqrt(area * share / np.pi), max(width, height) * share / 2.0)
+    return float(FIRST_SHARE * radius)
+
+
+def _occupied_share(boxes: Floats, low: Floats, high: Floats) -> float:
+    """Share of the targets' bounding box where there are any, seen in coarse squares."""
+    side = int(np.clip(np.sqrt(len(boxes) / FEW_IN_A_SQUARE), 1, MOST_SQUARES_A_SIDE))
+    centre = 0.5 * (boxes[:, :2] + boxes[:, 2:]) - low
+    square = np.minimum((centre * side / (high - low)).astype(np.int64), side - 1)
+    return len(np.unique(square[:, 0] * side + square[:, 1])) / side**2

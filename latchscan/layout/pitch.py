@@ -24,9 +24,11 @@ def repeat_pitch(tables: Tables, order: Ints, top: int) -> tuple[int, int] | Non
     """
     own = np.bincount(tables.polygon_cell, minlength=len(tables.cell_names)).tolist()
     counts = instance_counts(tables, order, top)
-    weights = [count * polygons for count, polygons in zip(counts, own, strict=True)]
+    weights = [
+        count * polygons if polygons > 1 else 0 for count, polygons in zip(counts, own, strict=True)
+    ]
     cell = max(range(len(weights)), key=weights.__getitem__)
-    if not REPEATS <= counts[cell] <= MOST_PLACEMENTS:
+    if not weights[cell] or not REPEATS <= counts[cell] <= MOST_PLACEMENTS:
         return None
     copies = all_placements(tables, top=top, order=order, cells=[cell])[cell]
     places = copies.shift[_commonest(copies.matrix)]

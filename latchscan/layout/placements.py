@@ -23,18 +23,32 @@ LARGEST_PART = 2.0e7
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Placements:
-    """Copies of one cell: (k, 4) matrices a, b, c, d and (k, 2) shifts."""
+    """Copies of one cell: (k, 4) matrices a, b, c, d and (k, 2) shifts.
+
+    `window` (k,) tells for which of the windows that are asked together a copy stands.
+    """
 
     matrix: Floats
     shift: Floats
+    window: Ints
 
     def __len__(self) -> int:
         return len(self.shift)
 
+    def take(self, rows: Ints) -> Placements:
+        """Some of the copies."""
+        return Placements(
+            matrix=self.matrix[rows], shift=self.shift[rows], window=self.window[rows]
+        )
 
-def identity() -> Placements:
-    """One copy exactly where it is."""
-    return Placements(matrix=np.array([[1.0, 0.0, 0.0, 1.0]]), shift=np.zeros((1, 2)))
+
+def identity(windows: int = 1) -> Placements:
+    """One copy exactly where it is for each of some windows."""
+    return Placements(
+        matrix=np.tile([[1.0, 0.0, 0.0, 1.0]], (windows, 1)),
+        shift=np.zeros((windows, 2)),
+        window=np.arange(windows),
+    )
 
 
 def joined(parts: list[Placements]) -> Placements:
@@ -44,6 +58,7 @@ def joined(parts: list[Placements]) -> Placements:
     return Placements(
         matrix=np.concatenate([part.matrix for part in parts]),
         shift=np.concatenate([part.shift for part in parts]),
+        window=np.concatenate([part.window for part in parts]),
     )
 
 
@@ -107,6 +122,7 @@ def unrolled(
     copies = Placements(
         matrix=_product(matrix, tables.reference_matrix[row]),
         shift=turned(matrix, place) + outer.shift[copy],
+        window=outer.window[copy],
     )
     return copies, row
 
@@ -119,7 +135,7 @@ def split_by_child(tables: Tables, copies: Placements, rows: Ints) -> list[tuple
     by_child = np.argsort(child, kind="stable")
     names, starts = np.unique(child[by_child], return_index=True)
     return [
-        (name, Placements(matrix=copies.matrix[part], shift=copies.shift[part]))
+        (name, copies.take(part))
         for name, part in zip(names.tolist(), np.split(by_child, starts[1:]), strict=True)
     ]
 

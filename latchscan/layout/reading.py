@@ -36,6 +36,7 @@ LARGEST_ARRAY = 1 << 40
 """Most instances of one array."""
 LARGEST_TURN = 1e6
 MAGNIFICATIONS = (1e-6, 1e6)
+OASIS_END, OASIS_END_BYTES = b"\x02", 256
 BAD_FILE = 3
 NO_ROOM = 4
 QUARTER_TURN_SLACK = 1e-9
@@ -126,8 +127,8 @@ def read_tables(path: str, *, kind: str, shape_pairs: list[Pair], text_pairs: li
     shape_pairs, text_pairs
         The layer/datatype pairs of shapes and the layer/texttype pairs of texts to keep.
     """
-    if kind == "oasis" and gdstk.oas_validate(path)[0] is False:
-        raise UnreadableError("its checksum does not match its content")
+    if kind == "oasis":
+        _check_oasis_end(Path(path))
     info = gdstk.gds_info(path) if kind == "gdsii" else {}
     library = (
         gdstk.read_gds(path, filter=set(shape_pairs)) if kind == "gdsii" else gdstk.read_oas(path)
@@ -147,6 +148,20 @@ def read_tables(path: str, *, kind: str, shape_pairs: list[Pair], text_pairs: li
             " magnifies cells; expected plain widths or no magnification"
         )
     return _finish(columns, pairs, library.precision * 1e6)
+
+
+def _check_oasis_end(path: Path) -> None:
+    """Refuse an OASIS file that is cut within its END record or fails its own checksum.
+
+    SEMI P39 (OASIS) gives END a fixed length so that its place can be known from the end of
+    the file; gdstk stops reading where it begins.
+    """
+    with path.open("rb") as stream:
+        stream.seek(max(0, path.stat().st_size - OASIS_END_BYTES))
+        if stream.read(1) != OASIS_END:
+            raise UnreadableError("it does not close with a whole END record")
+    if gdstk.oas_validate(str(path))[0] is False:
+        raise UnreadableError("its checksum does not match its content")
 
 
 def _walk_cells(

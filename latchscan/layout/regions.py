@@ -16,6 +16,7 @@ import numpy as np
 import shapely
 
 from latchscan.errors import LayoutError, OptionError
+from latchscan.layout.contacts import distinct_boxes, merged_across, merged_boxes
 from latchscan.layout.derivation import DRAWN_REGIONS, TAPS, Program, compile_program
 from latchscan.layout.geometry import SUBGRID, rings_to_polygons
 from latchscan.layout.model import (
@@ -112,7 +113,7 @@ def derive_regions(
     return Regions(
         bbox_um=_to_um(block, unit),
         shapes=shapes,
-        contact_box_um=frozen(_tap_contacts(results, shapes, unit)),
+        contact_box_um=frozen(_tap_contacts(results, shapes, unit, lines)),
         labels=_labels_inside(source, label_pairs, _to_um(block, unit)),
     )
 
@@ -244,49 +245,24 @@ def _joined(results: list[TileResult], name: str, seams: tuple[Ints, Ints]) -> R
 
 
 def _tap_contacts(
-    results: list[TileResult], shapes: Mapping[str, Geometries], unit_um: float
+    results: list[TileResult],
+    shapes: Mapping[str, Geometries],
+    unit_um: float,
+    seams: tuple[Ints, Ints],
 ) -> Floats:
     """Boxes [um] of contacts on taps: merged, each once, sorted by (y0, x0)."""
-    sure = np.unique(np.concatenate([r.sure_contacts for r in results]), axis=0)
-    unsure = np.unique(np.concatenate([r.unsure_contacts for r in results]), axis=0)
+    found = np.concatenate([r.sure_contacts for r in results])
+    unsure = distinct_boxes(np.concatenate([r.unsure_contacts for r in results]))
     if len(unsure):
         taps = np.concatenate([shapes[name] for name in TAPS])
         boxes = shapely.box(*(unsure / SUBGRID * unit_um).T)
         row, tap = shapely.STRtree(taps).query(boxes, predicate="intersects")
         shared = shapely.area(shapely.intersection(boxes[row], taps[tap]))
         on_tap = np.unique(row[shared > 0])
-        sure = np.unique(np.concatenate([sure, unsure[on_tap]]), axis=0)
-    steps = _merged_boxes(sure)
+        steps = merged_boxes(distinct_boxes(np.concatenate([found, unsure[on_tap]])))
+    else:
+        steps = merged_across(found, *seams)
     return steps[np.lexsort((steps[:, 0], steps[:, 1]))] / SUBGRID * unit_um
-
-
-def _merged_boxes(boxes: Ints) -> Ints:
-    """Boxes that overlap or share an edge replaced by the box around them."""
-    while len(boxes) > 1:
-        row, other = shapely.STRtree(shapely.box(*boxes.T)).query(
-            shapely.box(*boxes.T), predicate="intersects"
-        )
-        later = row < other
-        row, other = row[later], other[later]
-        low = np.maximum(boxes[row, :2], boxes[other, :2])
-        high = np.minimum(boxes[row, 2:], boxes[other, 2:])
-        linked = (high > low).any(axis=1)
-        if not linked.any():
-            return boxes
-        row, other = row[linked], other[linked]
-        lead = np.arange(len(boxes))
-        while True:
-            least = np.minimum(lead[row], lead[other])
-            np.minimum.at(lead, row, least)
-            np.minimum.at(lead, other, least)
-            if np.array_equal(lead[row], lead[other]):
-                break
-        _, group = np.unique(lead, return_inverse=True)
-        order = np.argsort(group, kind="stable")
-        first = np.searchsorted(group[order], np.arange(group.max() + 1))
-        low = np.minimum.reduceat(boxes[order, :2], first)
-        boxes = np.hstack([low, np.maximum.reduceat(boxes[order, 2:], first)])
-    return boxes
 
 
 def _labels_inside(source: LayoutSource, pairs: list[Pair], box: Box) -> tuple[Label, ...]:

@@ -17,7 +17,7 @@ from latchscan.caveats import Caveat
 from latchscan.layout.guard import file_sha256, read_layout
 from latchscan.layout.hierarchy import parents_first, polygon_counts
 from latchscan.layout.library import Library
-from latchscan.layout.model import Box, Label
+from latchscan.layout.model import Box, Ints, Label
 from latchscan.layout.pitch import repeat_pitch
 from latchscan.layout.placements import all_placements
 from latchscan.layout.settling import bounding_box, choose_top, layer_notes, refuse_missing
@@ -80,6 +80,13 @@ class LayoutSource:
             For each pair the polygons, unclipped and counter-clockwise.
         """
         return self._library.walker(pairs).window(box_dbu)
+
+    def near(self, boxes_dbu: Ints, pairs: Iterable[Pair]) -> dict[Pair, PolygonColumns]:
+        """Polygons whose bounding box meets any of the boxes (k, 4), as `window` gives them.
+
+        All boxes are looked up in one walk; what meets several of them comes several times.
+        """
+        return self._library.walker(pairs).windows(boxes_dbu.astype(np.float64))
 
     def labels(self, pairs: Iterable[Pair]) -> tuple[Label, ...]:
         """Texts of the whole hierarchy on these layer/texttype pairs, sorted by (y, x, text)."""

@@ -74,6 +74,14 @@ def select_rings(rings: Rings, chosen: NDArray[np.bool_]) -> Rings:
     )
 
 
+def pick_rings(rings: Rings, order: Ints) -> Rings:
+    """The rings with the indices `order`, in that order; an index may come again."""
+    sizes = np.diff(rings.first)[order]
+    first = _offsets(sizes)
+    inside = np.arange(first[-1]) - np.repeat(first[:-1], sizes)
+    return Rings(points=rings.points[np.repeat(rings.first[order], sizes) + inside], first=first)
+
+
 def stitch(rings: Rings) -> Rings:
     """Rings of the union of polygons with disjoint insides, in canonical form.
 
@@ -116,7 +124,7 @@ def sort_rings(rings: Rings) -> Rings:
     if not rings.count:
         return rings
     head, after = rings.points[rings.first[:-1]], rings.points[rings.first[:-1] + 1]
-    return _reorder(rings, np.lexsort((after[:, 0], after[:, 1], head[:, 0], head[:, 1])))
+    return pick_rings(rings, np.lexsort((after[:, 0], after[:, 1], head[:, 0], head[:, 1])))
 
 
 def signed_areas(rings: Rings) -> NDArray[np.float64]:
@@ -132,13 +140,6 @@ def signed_areas(rings: Rings) -> NDArray[np.float64]:
 
 def _offsets(sizes: Ints) -> Ints:
     return np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)
-
-
-def _reorder(rings: Rings, order: Ints) -> Rings:
-    sizes = np.diff(rings.first)[order]
-    first = _offsets(sizes)
-    inside = np.arange(first[-1]) - np.repeat(first[:-1], sizes)
-    return Rings(points=rings.points[np.repeat(rings.first[order], sizes) + inside], first=first)
 
 
 def _next_index(first: Ints) -> Ints:

@@ -12,15 +12,18 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from itertools import pairwise
 
 import numpy as np
 
+from latchscan.layout.contacts import NO_BOXES, distinct_boxes, meets_any, merged_boxes
 from latchscan.layout.derivation import Program
-from latchscan.layout.evaluation import NO_BOXES, WindowResult, evaluate
-from latchscan.layout.geometry import SUBGRID, draw_rings, merged, to_rings
+from latchscan.layout.evaluation import WindowResult, evaluate
+from latchscan.layout.geometry import SUBGRID, bounding_boxes, draw_rings, merged, to_rings
 from latchscan.layout.model import Ints
+from latchscan.layout.slabs import within_runs
 from latchscan.layout.source import LayoutSource, PolygonColumns
-from latchscan.layout.stitching import Rings, join_rings, select_rings, stitch
+from latchscan.layout.stitching import Rings, join_rings, no_rings, pick_rings, select_rings, stitch
 from latchscan.layout.windows import (
     BoxDbu,
     Grid,
@@ -81,7 +84,8 @@ class TileResult:
     regions
         Region name -> rings; an absent name is an empty region.
     sure_contacts, unsure_contacts
-        Boxes (n, 4), as in `WindowResult`.
+        (n, 4) boxes on rectangles of taps, merged; (m, 4) boxes that overlap the bounding
+        box of another tap.
     """
 
     shape_count: int
@@ -111,24 +115,64 @@ def derive_tiles(task: TileTask) -> list[TileResult]:
 
 def _derive_tile(task: TileTask, tile: BoxDbu, memory: _Memory) -> TileResult:
     shapes = _fetch(task, tile)
-    counts = {name: len(boxes) + rings.count for name, (boxes, rings) in shapes.items()}
-    count = sum(counts.values())
-    if not count:
+    count = sum(len(boxes) + rings.count for boxes, rings in shapes.values())
+    shape_count = count or _contact_count(task, tile)
+    if not shape_count:
         return _blank(task, tile)
-    # contacts are columns all the way: only the other shapes make a window dear
-    dear = count - sum(counts[name] for name in task.program.contact_layers)
-    grid = _choose_grid(task, tile, max(dear, 1))
+    grid = _choose_grid(task, tile, max(count, 1))
     columns = sort_layers(task.program, shapes, grid)
     results = _derive_windows(task, grid, columns, memory)
     names = [name for name, _ in task.program.regions]
     regions = {name: stitch(_gather(results, name)) for name in names}
-    sure = [r.sure_contacts + np.tile(corner, 2) for r, corner in results]
-    unsure = [r.unsure_contacts + np.tile(corner, 2) for r, corner in results]
+    sure, unsure = _tap_contacts(task, results)
     return TileResult(
-        shape_count=count,
+        shape_count=shape_count,
         regions={name: rings for name, rings in regions.items() if rings.count},
-        sure_contacts=_distinct(sure),
-        unsure_contacts=_distinct(unsure),
+        sure_contacts=sure,
+        unsure_contacts=unsure,
+    )
+
+
+def _contact_count(task: TileTask, tile: BoxDbu) -> int:
+    """Contacts of a tile that holds nothing else."""
+    contacts = task.source.window(_widened(task, tile), _contact_pairs(task))
+    return sum(len(columns) for columns in contacts.values())
+
+
+def _contact_pairs(task: TileTask) -> list[Pair]:
+    return sorted({pair for name in task.program.contact_layers for pair in task.layers[name]})
+
+
+def _tap_contacts(task: TileTask, results: list[tuple[WindowResult, Ints]]) -> tuple[Ints, Ints]:
+    """Contacts on rectangles of taps, merged, and those that another tap may hold."""
+    taps = _moved([(result.tap_boxes, corner) for result, corner in results])
+    slanted = _moved([(result.slanted_tap_boxes, corner) for result, corner in results])
+    contacts = _moved([(result.contacts, corner) for result, corner in results])
+    sure = np.concatenate([contacts[meets_any(contacts, taps)], _drawn_contacts(task, taps)])
+    unsure = np.concatenate(
+        [contacts[meets_any(contacts, slanted)], _drawn_contacts(task, slanted)]
+    )
+    return merged_boxes(distinct_boxes(sure)), distinct_boxes(unsure)
+
+
+def _drawn_contacts(task: TileTask, taps: Ints) -> Ints:
+    """Boxes of the drawn contacts that overlap any of the tap boxes with area."""
+    pairs = _contact_pairs(task)
+    if not pairs or not len(taps):
+        return NO_BOXES
+    # the first and last whole database units inside a box: what meets them overlaps it
+    inside = np.hstack([taps[:, :2] // SUBGRID + 1, -(-taps[:, 2:] // SUBGRID) - 1])
+    found = task.source.near(inside, pairs)
+    parts = [_separate(found[pair], {}) for pair in pairs]
+    others = bounding_boxes(join_rings([rings for _, rings in parts]))
+    # a shape may be cleaned into lobes, of which not all need be on the tap
+    return np.concatenate([*(boxes for boxes, _ in parts), others[meets_any(others, taps)]])
+
+
+def _moved(parts: list[tuple[Ints, Ints]]) -> Ints:
+    """Boxes of windows, relative to the corner (x, y) of each, in their real places."""
+    return np.concatenate(
+        [NO_BOXES, *(boxes + np.tile(corner, 2) for boxes, corner in parts if len(boxes))]
     )
 
 
@@ -146,10 +190,6 @@ def _blank(task: TileTask, tile: BoxDbu) -> TileResult:
     )
 
 
-def _distinct(parts: list[Ints]) -> Ints:
-    return np.unique(np.concatenate([NO_BOXES, *parts]), axis=0)
-
-
 def _gather(results: list[tuple[WindowResult, Ints]], name: str) -> Rings:
     found = [(r.regions[name], corner) for r, corner in results if name in r.regions]
     return join_rings(
@@ -158,20 +198,26 @@ def _gather(results: list[tuple[WindowResult, Ints]], name: str) -> Rings:
 
 
 def _fetch(task: TileTask, tile: BoxDbu) -> dict[str, tuple[Ints, Rings]]:
-    """Each layer's rectangles and other shapes around the tile [grid steps]."""
-    margin = _margin_dbu(task)
-    x0, y0, x1, y1 = tile
-    pairs = sorted({pair for group in task.layers.values() for pair in group})
-    columns = task.source.window((x0 - margin, y0 - margin, x1 + margin, y1 + margin), pairs)
+    """Rectangles and other shapes of each layer but the contacts', around the tile [grid steps]."""
+    names = sorted({*task.program.layers(wide=False), *task.program.layers(wide=True)})
+    pairs = sorted({pair for name in names for pair in task.layers[name]})
+    columns = task.source.window(_widened(task, tile), pairs)
     cleaned: dict[bytes, Rings] = {}
     shapes = {}
-    for name, group in task.layers.items():
-        parts = [_separate(columns[pair], cleaned) for pair in group]
+    for name in names:
+        parts = [_separate(columns[pair], cleaned) for pair in task.layers[name]]
         shapes[name] = (
             np.concatenate([boxes for boxes, _ in parts]),
             join_rings([rings for _, rings in parts]),
         )
     return shapes
+
+
+def _widened(task: TileTask, tile: BoxDbu) -> BoxDbu:
+    """A tile with its margin."""
+    margin = _margin_dbu(task)
+    x0, y0, x1, y1 = tile
+    return (x0 - margin, y0 - margin, x1 + margin, y1 + margin)
 
 
 def _margin_dbu(task: TileTask) -> int:
@@ -183,30 +229,51 @@ def _separate(columns: PolygonColumns, cleaned: dict[bytes, Rings]) -> tuple[Int
     points, first = columns.points * SUBGRID, columns.first
     sizes = np.diff(first)
     four = sizes == 4
-    corners = points[np.repeat(four, sizes)].reshape(-1, 4, 2)
-    turns = np.roll(corners, -1, axis=1) - corners
-    upright = np.all(np.any(turns == 0, axis=2), axis=1)
-    upright &= np.all(corners[:, 0] + corners[:, 2] == corners[:, 1] + corners[:, 3], axis=1)
-    boxes = np.hstack([corners[upright].min(axis=1), corners[upright].max(axis=1)])
+    corners = points if four.all() else points[np.repeat(four, sizes)]
+    x, y = corners.reshape(-1, 4, 2).transpose(2, 1, 0)
+    flat = (y[0] == y[1]) & (x[1] == x[2]) & (y[2] == y[3]) & (x[3] == x[0])
+    upright = flat | ((x[0] == x[1]) & (y[1] == y[2]) & (x[2] == x[3]) & (y[3] == y[0]))
+    ends = corners.reshape(-1, 4, 2)[upright][:, [0, 2]]
+    boxes = np.hstack([ends.min(axis=1), ends.max(axis=1)])
     boxes = boxes[(boxes[:, 0] < boxes[:, 2]) & (boxes[:, 1] < boxes[:, 3])]
     other = np.ones(len(sizes), dtype=np.bool_)
     other[np.flatnonzero(four)[upright]] = False
+    if not other.any():
+        return boxes, no_rings()
     kept = select_rings(Rings(points=points, first=first), other)
     return boxes, _cleaned(kept, cleaned)
 
 
 def _cleaned(rings: Rings, known: dict[bytes, Rings]) -> Rings:
     """The same areas without crossings: a lobe that winds backwards would cancel overlaps."""
-    parts = []
-    for start, end in zip(rings.first[:-1].tolist(), rings.first[1:].tolist(), strict=True):
-        corner = rings.points[start]
-        relative = rings.points[start:end] - corner
-        key = relative.tobytes()
-        if key not in known:
-            one = Rings(points=relative, first=np.array([0, len(relative)], dtype=np.int64))
-            known[key] = to_rings(merged(draw_rings(one)))
-        parts.append(Rings(points=known[key].points + corner, first=known[key].first))
-    return join_rings(parts)
+    corners = rings.points[rings.first[:-1]]
+    relative = rings.points - np.repeat(corners, np.diff(rings.first), axis=0)
+    kinds: dict[bytes, int] = {}
+    parts: list[Rings] = []
+    kind = np.empty(rings.count, dtype=np.int64)
+    buffer, width = relative.tobytes(), relative.itemsize * 2
+    limits = (rings.first * width).tolist()
+    for row, (start, end) in enumerate(pairwise(limits)):
+        key = buffer[start:end]
+        if key not in kinds:
+            kinds[key] = len(parts)
+            parts.append(_clean(key, known))
+        kind[row] = kinds[key]
+    lobes = np.array([part.count for part in parts])[kind]
+    first = np.cumsum([0, *(part.count for part in parts)])[kind]
+    picked = np.repeat(first, lobes) + within_runs(lobes)
+    found = pick_rings(join_rings(parts), picked)
+    moved = np.repeat(np.repeat(corners, lobes, axis=0), np.diff(found.first), axis=0)
+    return Rings(points=found.points + moved, first=found.first)
+
+
+def _clean(key: bytes, known: dict[bytes, Rings]) -> Rings:
+    """One ring, given as bytes relative to its first point, without crossings."""
+    if key not in known:
+        points = np.frombuffer(key, dtype=np.int64).reshape(-1, 2)
+        one = Rings(points=points, first=np.array([0, len(points)], dtype=np.int64))
+        known[key] = to_rings(merged(draw_rings(one)))
+    return known[key]
 
 
 def _choose_grid(task: TileTask, tile: BoxDbu, shape_count: int) -> Grid:

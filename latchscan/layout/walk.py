@@ -79,15 +79,19 @@ class Walker:
 
     def window(self, box: tuple[float, float, float, float]) -> dict[Pair, PolygonColumns]:
         """Polygons whose bounding box meets the box (touching counts), unclipped."""
-        wide = np.array(box, dtype=np.float64) + np.array([-MARGIN, -MARGIN, MARGIN, MARGIN])
-        found = _Pieces(np.array(box, dtype=np.float64))
+        return self.windows(np.array([box], dtype=np.float64))
+
+    def windows(self, boxes: Floats) -> dict[Pair, PolygonColumns]:
+        """The same for many boxes (k, 4) in one walk; what meets several comes several times."""
+        wide = boxes + np.array([-MARGIN, -MARGIN, MARGIN, MARGIN])
+        found = _Pieces(boxes)
         waiting: dict[int, list[Placements]] = {}
         heap: list[int] = []
-        self._send(waiting, heap, self._top, identity())
+        self._send(waiting, heap, self._top, identity(len(boxes)))
         while heap:
             cell = int(self._order[heapq.heappop(heap)])
             placements = joined(waiting.pop(cell))
-            local = _local_boxes(wide, placements)
+            local = _local_boxes(wide[placements.window], placements)
             self._gather(cell, placements, local, found)
             self._descend(cell, placements, local, waiting, heap)
         number = {pair: index for index, pair in enumerate(self._tables.pairs)}
@@ -130,20 +134,21 @@ class Walker:
             source, lengths = vertex_rows(tables.polygon_first, chosen, mirrored)
             owner = np.repeat(np.arange(len(chosen)), lengths)
             points = _placed(tables.polygon_points[source], matrix, placements.shift[copies], owner)
-            found.add(points, lengths, tables.polygon_pair[chosen])
+            window = placements.window[copies]
+            found.add(points, lengths, tables.polygon_pair[chosen], window)
 
 
 class _Pieces:
     """Polygons found so far, each piece sorted by pair and cleared of near misses."""
 
-    def __init__(self, box: Floats) -> None:
-        self._box = box
+    def __init__(self, boxes: Floats) -> None:
+        self._boxes = boxes
         self._pieces: list[tuple[Ints, Ints, Ints]] = []
 
-    def add(self, points: Ints, lengths: Ints, pair: Ints) -> None:
-        """Add polygons, those whose own box meets the window's."""
+    def add(self, points: Ints, lengths: Ints, pair: Ints, window: Ints) -> None:
+        """Add polygons, those whose own box meets the box of their window."""
         first = offsets(lengths)
-        inside = _meets(points, first, self._box)
+        inside = _meets(points, first, self._boxes[window])
         if not inside.all():
             rows = np.flatnonzero(inside)
             source, lengths = vertex_rows(first, rows, np.zeros(len(rows), dtype=np.bool_))
@@ -164,12 +169,12 @@ class _Pieces:
         return PolygonColumns(np.concatenate(points), offsets(np.concatenate(lengths)))
 
 
-def _local_boxes(box: Floats, placements: Placements) -> Floats:
-    """The box seen from inside each placement: (k, 4)."""
+def _local_boxes(boxes: Floats, placements: Placements) -> Floats:
+    """The box (k, 4) of each placement seen from inside it: (k, 4)."""
     a, b, c, d = placements.matrix.T
     determinant = a * d - b * c
     inverse = np.stack([d, -b, -c, a], axis=1) / determinant[:, None]
-    shifted = box[None, :] - np.tile(placements.shift, 2)
+    shifted = boxes - np.tile(placements.shift, 2)
     return turned_box(shifted, inverse)
 
 
@@ -186,10 +191,11 @@ def _placed(points: Ints, matrix: Floats, shift: Floats, owner: Ints) -> Ints:
     return np.floor(place + 0.5).astype(np.int64)
 
 
-def _meets(points: Ints, first: Ints, box: Floats) -> NDArray[np.bool_]:
+def _meets(points: Ints, first: Ints, boxes: Floats) -> NDArray[np.bool_]:
+    """(n,) whether each polygon's bounding box meets its own of the boxes (n, 4)."""
     starts = first[:-1]
     if len(starts) == 0:
         return np.zeros(0, dtype=np.bool_)
     low = np.minimum.reduceat(points, starts, axis=0)
     high = np.maximum.reduceat(points, starts, axis=0)
-    return boxes_meet(np.concatenate([low, high], axis=1).astype(np.float64), box[None])
+    return boxes_meet(np.concatenate([low, high], axis=1).astype(np.float64), boxes)

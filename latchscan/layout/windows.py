@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.layout.derivation import Program
-from latchscan.layout.evaluation import NO_BOXES, DrawnLayer, Window
+from latchscan.layout.evaluation import DrawnLayer, Window
 from latchscan.layout.geometry import both, bounding_boxes, draw_boxes, draw_rings, to_rings
 from latchscan.layout.model import Ints
 from latchscan.layout.stitching import Rings, join_rings, no_rings, select_rings
@@ -60,18 +60,14 @@ class SortedShapes:
 def sort_layers(
     program: Program, shapes: Mapping[str, tuple[Ints, Rings]], grid: Grid
 ) -> dict[str, dict[str, SortedShapes]]:
-    """Layer name -> sorted shapes, for the frames, the margin frames and the contacts."""
+    """Layer name -> sorted shapes, for the frames and the margin frames."""
     cut = {name: (boxes, _cut(rings, grid)) for name, (boxes, rings) in shapes.items()}
     groups = {
         "narrow": (program.layers(wide=False), 0),
         "wide": (program.layers(wide=True), grid.margin),
-        "contact": (program.contact_layers, 0),
     }
     return {
-        group: {
-            name: _sort(*(shapes if group == "contact" else cut)[name], grid, margin)
-            for name in names
-        }
+        group: {name: _sort(*cut[name], grid, margin) for name in names}
         for group, (names, margin) in groups.items()
     }
 
@@ -182,14 +178,12 @@ def cut_window(
     block_frame = np.concatenate(
         [np.maximum(margin_frame[:2], inside[:2]), np.minimum(margin_frame[2:], inside[2:])]
     )
-    contacts = [_boxes(column, index, corner) for column in columns["contact"].values()]
     window = Window(
         frame=_tuple(local),
         margin_frame=_tuple(margin_frame),
         block_frame=_tuple(block_frame),
         narrow=_layers(columns["narrow"], index, corner, local),
         wide=_layers(columns["wide"], index, corner, margin_frame),
-        contact_boxes=np.concatenate([NO_BOXES, *contacts]),
     )
     return window, corner
 
@@ -197,16 +191,6 @@ def cut_window(
 def _tuple(box: Ints) -> BoxDbu:
     x0, y0, x1, y1 = box.tolist()
     return (x0, y0, x1, y1)
-
-
-def _boxes(column: SortedShapes, index: int, corner: Ints) -> Ints:
-    """Unclipped boxes of all shapes of a window, relative to its corner."""
-    boxes = column.boxes[column.box_first[index] : column.box_first[index + 1]]
-    rings = column.ring_index[column.ring_first[index] : column.ring_first[index + 1]]
-    if len(rings):
-        others = _picked(column.rings, rings, np.zeros(2, dtype=np.int64))
-        boxes = np.concatenate([boxes, bounding_boxes(others)])
-    return boxes - np.tile(corner, 2)
 
 
 def _layers(
@@ -240,7 +224,7 @@ def _picked(rings: Rings, rows: Ints, corner: Ints) -> Rings:
 
 def window_key(window: Window) -> tuple[object, ...]:
     """The window's whole content as a key: equal keys have equal results."""
-    parts: list[object] = [window.frame, window.block_frame, window.contact_boxes.tobytes()]
+    parts: list[object] = [window.frame, window.block_frame]
     for group in (window.narrow, window.wide):
         for name, layer in group.items():
             rings = layer.rings

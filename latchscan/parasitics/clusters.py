@@ -8,6 +8,7 @@ small.
 
 from __future__ import annotations
 
+from collections import Counter
 from itertools import pairwise
 
 import numpy as np
@@ -19,11 +20,19 @@ MOST_EMITTERS = 64
 _TILE_FACTOR = 1.75
 """Tiles of a repeating layout hold more: dense arrays leave room on the same grid."""
 _REPEATING_SHARE = 0.6
+_AS_GOOD = 0.02
+"""Difference of two shares below which the smaller step serves as well."""
+_AHEAD = (1, 2, 3, 4, 5, 6, 7, 8, 10, 12, 14, 16, 20, 24, 28, 32)
+"""How many equal emitters of a row a step may pass over."""
+_GAP_UM = 20.0
+"""Emitters farther apart belong to different parts of a layout, each with its own pitch."""
+_FEWEST_ALONE, _FEWEST_EQUALS = 8, 4
+"""Emitters of an island, and islands alike, that make it worth a window of its own."""
 _FEWEST_TO_REPEAT = 500
 _CANDIDATES = 24
 _KEY_PER_UM = 1000.0
-_WIDEST_UM = 80.0
-"""A group never spreads wider: its window would hold too much of the layout."""
+_WIDEST_UM = 45.0
+"""A group never spreads wider: the grid over it would be too coarse for an emitter."""
 
 
 def cluster_emitters(boxes_um: Floats, most: int = MOST_EMITTERS) -> list[Ints]:
@@ -43,20 +52,56 @@ def cluster_emitters(boxes_um: Floats, most: int = MOST_EMITTERS) -> list[Ints]:
     if len(boxes_um) == 0:
         return []
     middle = (boxes_um[:, :2] + boxes_um[:, 2:]) / 2.0
-    groups = [np.arange(len(boxes_um), dtype=np.int64)]
-    pitch = repeat_pitch(boxes_um)
-    if pitch is not None:
-        most = int(_TILE_FACTOR * most)
-        groups = _tiles(middle, _tile_size(middle, pitch, most))
     result: list[Ints] = []
-    for group in groups:
-        result.extend(_halve(middle, group, most))
+    rest: list[Ints] = []
+    dense = int(_TILE_FACTOR * most)
+    islands = _islands(boxes_um, np.arange(len(boxes_um), dtype=np.int64))
+    alike = _equals(boxes_um, islands)
+    for island, equals in zip(islands, alike, strict=True):
+        if _FEWEST_ALONE <= len(island) <= most and equals >= _FEWEST_EQUALS:
+            result.extend(_halve(middle, island, most))
+            continue
+        pitch = repeat_pitch(boxes_um[island])
+        if pitch is None:
+            rest.append(island)
+            continue
+        place = middle[island]
+        for tile in _tiles(place, _tile_size(place, pitch, dense)):
+            result.extend(_halve(middle, island[tile], dense))
+    if rest:
+        result.extend(_halve(middle, np.sort(np.concatenate(rest)), most))
     return result
 
 
-def repeat_pitch(boxes_um: Floats) -> tuple[float, float] | None:
-    """Smallest steps along x and y that carry most emitters onto equal ones [um].
+def _equals(boxes_um: Floats, islands: list[Ints]) -> list[int]:
+    """For each island the number of islands that look like it, itself among them."""
+    keys = []
+    for island in islands:
+        boxes = boxes_um[island]
+        grid = np.rint((boxes - np.tile(boxes[:, :2].min(axis=0), 2)) * _KEY_PER_UM)
+        keys.append(grid[np.lexsort(grid.T)].tobytes())
+    count = Counter(keys)
+    return [count[key] for key in keys]
 
+
+def _islands(boxes_um: Floats, group: Ints) -> list[Ints]:
+    """Parts of a group that gaps wider than `_GAP_UM` set apart, straight across the group."""
+    for axis in (0, 1):
+        low, high = boxes_um[group, axis], boxes_um[group, axis + 2]
+        order = np.argsort(low, kind="stable")
+        gap = low[order][1:] - np.maximum.accumulate(high[order])[:-1]
+        cuts = np.flatnonzero(gap > _GAP_UM) + 1
+        if len(cuts):
+            parts = np.split(order, cuts)
+            return [found for part in parts for found in _islands(boxes_um, np.sort(group[part]))]
+    return [group]
+
+
+def repeat_pitch(boxes_um: Floats) -> tuple[float, float] | None:
+    """Steps along x and y that carry most emitters onto equal ones [um].
+
+    The smallest step is taken of those that carry about as many as the best one does: the
+    fingers of a device repeat too, but the step from device to device carries more of them.
     A direction without such a step has pitch 0; None where neither direction has one.
     """
     if len(boxes_um) < _FEWEST_TO_REPEAT:
@@ -73,16 +118,17 @@ def _axis_pitch(grid: Ints, axis: int) -> int:
     order = np.lexsort((grid[:, axis], grid[:, 1 - axis], size[:, 0], size[:, 1]))
     row, alike = grid[order], size[order]
     steps = []
-    for ahead in (1, 2, 3, 4, 6, 8):
+    for ahead in _AHEAD:
         same = np.all(alike[ahead:] == alike[:-ahead], axis=1)
         same &= row[ahead:, 1 - axis] == row[:-ahead, 1 - axis]
         steps.append((row[ahead:, axis] - row[:-ahead, axis])[same])
     step, count = np.unique(np.concatenate(steps), return_counts=True)
     likely = step[np.argsort(-count, kind="stable")[:_CANDIDATES]]
-    for candidate in np.sort(likely):
-        if candidate > 0 and _repeating_share(grid, axis, int(candidate)) >= _REPEATING_SHARE:
-            return int(candidate)
-    return 0
+    likely = np.sort(likely[likely > 0])
+    share = np.array([_repeating_share(grid, axis, int(step)) for step in likely])
+    if share.max(initial=0.0) < _REPEATING_SHARE:
+        return 0
+    return int(likely[np.argmax(share >= share.max() - _AS_GOOD)])
 
 
 def _repeating_share(grid: Ints, axis: int, step: int) -> float:
@@ -109,8 +155,12 @@ def _tile_size(middle: Floats, pitch: tuple[float, float], most: int) -> tuple[f
     """Multiples of the pitch that hold about three quarters of `most` emitters."""
     extent = np.maximum(np.ptp(middle, axis=0), 1e-3)
     side = float(np.sqrt(0.75 * most * extent.prod() / len(middle)))
-    x, y = (step * max(1, round(side / step)) if step else side for step in pitch)
-    return x, y
+    size = [side, side]
+    # the coarser pitch first: the other side makes up for what its rounding adds
+    for axis in np.argsort(pitch)[::-1]:
+        wanted = side**2 / size[1 - axis]
+        size[axis] = pitch[axis] * max(1, round(wanted / pitch[axis])) if pitch[axis] else wanted
+    return size[0], size[1]
 
 
 def _tiles(middle: Floats, size: tuple[float, float]) -> list[Ints]:

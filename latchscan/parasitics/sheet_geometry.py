@@ -328,20 +328,15 @@ def spread_sources(polygons: Geometries, parts: Geometries) -> SheetSources:
 def _columns(
     pieces: list[Any], owner: list[int], domain: list[int], weight: list[float]
 ) -> SheetSources:
-    starts, ends, first = [np.empty((0, 2))], [np.empty((0, 2))], [0]
-    for piece in shapely.orient_polygons(np.array(pieces, dtype=object)):
-        count = 0
-        for ring in (piece.exterior, *piece.interiors):
-            points = shapely.get_coordinates(ring)
-            real = np.any(points[1:] != points[:-1], axis=1)
-            starts.append(points[:-1][real])
-            ends.append(points[1:][real])
-            count += int(real.sum())
-        first.append(first[-1] + count)
+    oriented = shapely.orient_polygons(np.array(pieces, dtype=object))
+    rings, piece = shapely.get_rings(oriented, return_index=True)
+    points, ring = shapely.get_coordinates(rings, return_index=True)
+    real = (ring[1:] == ring[:-1]) & np.any(points[1:] != points[:-1], axis=1)
+    count = np.bincount(piece[ring[:-1][real]], minlength=len(pieces))
     return SheetSources(
-        edge_start_um=np.concatenate(starts),
-        edge_end_um=np.concatenate(ends),
-        first=np.array(first, dtype=np.int64),
+        edge_start_um=points[:-1][real],
+        edge_end_um=points[1:][real],
+        first=np.concatenate([[0], np.cumsum(count)]).astype(np.int64),
         owner=np.array(owner, dtype=np.int64),
         domain=np.array(domain, dtype=np.int64),
         weight=np.array(weight, dtype=np.float64),

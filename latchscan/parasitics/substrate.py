@@ -19,13 +19,16 @@ from latchscan.parasitics.model import BodyFields, Resistances, Transfers
 from latchscan.parasitics.substrate_bulk import WindowFields, solve_bulk_window
 from latchscan.parasitics.substrate_sheet import solve_sheet_window
 from latchscan.parasitics.substrate_windows import (
+    MOST_HALO_UM,
+    WindowCutter,
     WindowUses,
-    cut_windows,
     substrate_scene,
 )
 from latchscan.tasks import Workers
 from latchscan.technology.model import UM_PER_CM, Technology
 
+ACCEPTED_RIM_ERROR = 0.05
+"""Relative error that a window's edge may cause before a wider window is solved."""
 _KERNEL_REACH_UM = 2000.0
 """Distances beyond it are those of a window's diagonal and a pair's reach together."""
 
@@ -79,19 +82,33 @@ def solve_substrate(
     if len(scene.emitter_index) == 0:
         return fields.frozen()
     kernel = tabulate_kernel(substrate_stack(technology, factor), _KERNEL_REACH_UM)
-    tasks = [
-        _Task(
-            window=window,
-            kernel=kernel,
-            conductance_s=None if sheet is None else 1.0 / (factor * sheet.typical),
-            patch_um=technology.loop.patch_radius_um,
-        )
-        for window in cut_windows(scene, pairs, technology.loop.patch_radius_um)
-    ]
-    for task, solved in zip(tasks, workers.map("substrate", _solve_or_none, tasks), strict=True):
-        if solved is not None:
-            fields.fill(task.window, solved)
+    cutter = WindowCutter(scene, pairs, technology.loop.patch_radius_um)
+    windows = cutter.all_windows()
+    while windows:
+        tasks = [
+            _Task(
+                window=window,
+                kernel=kernel,
+                conductance_s=None if sheet is None else 1.0 / (factor * sheet.typical),
+                patch_um=technology.loop.patch_radius_um,
+            )
+            for window in windows
+        ]
+        results = workers.map("substrate", _solve_or_none, tasks)
+        narrow = []
+        for window, solved in zip(windows, results, strict=True):
+            if solved is not None:
+                fields.fill(window, solved)
+                if _too_narrow(window, solved):
+                    narrow.append(window)
+        windows = cutter.wider(narrow)
     return fields.frozen()
+
+
+def _too_narrow(window: WindowUses, solved: WindowFields) -> bool:
+    """Whether what lies beyond the window matters and a wider one is allowed."""
+    worst = float(solved.rim_error.max(initial=0.0))
+    return worst > ACCEPTED_RIM_ERROR and window.window.halo_um < MOST_HALO_UM
 
 
 def substrate_stack(technology: Technology, factor: float) -> Stack:

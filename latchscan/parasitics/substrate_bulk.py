@@ -25,12 +25,16 @@ _FINE_ERROR = 1.0 / ((_FINE / _COARSE) ** 2 - 1.0)
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class WindowFields:
-    """Results of one window: core emitters (c) and one array a use for the transfers."""
+    """Results of one window: core emitters (c) and one array a use for the transfers.
+
+    `rim_error` is the part of `relative_error` that the window's edge causes.
+    """
 
     mean_ohm: Floats
     max_ohm: Floats
     patch_ohm: Floats
     relative_error: Floats
+    rim_error: Floats
     transfer_ohm: tuple[Floats, ...]
 
 
@@ -95,6 +99,7 @@ def solve_bulk_window(
         max_ohm=mean + _rise_at_middle(window.core, kernel),
         patch_ohm=patch_means(fine, window, patch_um),
         relative_error=np.abs(np.diagonal(coarse) - mean) * _FINE_ERROR / mean,
+        rim_error=np.zeros(window.core.count),
         transfer_ohm=flows.transfers(uses, kernel),
     )
 
@@ -199,5 +204,6 @@ def unbounded(window: Window, uses: tuple[Arrivals, ...]) -> WindowFields:
         max_ohm=endless,
         patch_ohm=endless,
         relative_error=np.zeros(window.core.count),
+        rim_error=np.zeros(window.core.count),
         transfer_ohm=tuple(np.full(len(use.pairs), np.inf) for use in uses),
     )

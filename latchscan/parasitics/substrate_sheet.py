@@ -37,21 +37,27 @@ from latchscan.parasitics.substrate_windows import (
     box_distances,
 )
 
-_CORE_CELLS = 3000
+_CORE_CELLS = 4500
 """Grid cells over the core's box."""
-_LEAST_STEP_UM, _MOST_STEP_UM = 0.15, 1.0
-_MARGIN_STEPS = 4
+_LEAST_STEP_UM, _MOST_STEP_UM = 0.12, 1.0
+_MARGIN_STEPS = 5
 _LINE_GROWTH = 1.2
 _CORE_BLOCKS = 8
 _LEAST_BLOCK_UM = 1.5
 _BLOCK_GROWTH = 0.8
 _NEAREST_TAPS, _PATCHES_ACROSS = 8, 3
-_FITTED_TAPS = 12
+_PATCH_GROWTH, _LEAST_PATCH_UM = 1.0, 2.5
+"""Length of a long tap's patches over its distance from the core, and the least one."""
+_FITTED_EDGES = 24
+_CLOSE_UM = 1.0
+"""Emitters this close to a tap have their edges on grid lines."""
 _BLOCK_ERROR = 0.1
 """Error of the blocks' sizes over the change when four become one (measured: 0.02 to 0.1)."""
+_RIM_ERROR = 3.0
+"""Over the square of the rim's share: measured against windows four times as wide (up to 3.1)."""
 _GRID_ERROR = 0.02
-"""Of the grid over the core: measured against grids five times finer and against finite
-differences in space."""
+"""Of the grid over the core: measured against grids two to five times finer (0.004 at large,
+0.013 beside taps) and against finite differences in space."""
 
 
 def solve_sheet_window(
@@ -71,10 +77,10 @@ def solve_sheet_window(
     Notes
     -----
     The window's edge is insulating.  The error adds a share of the change with larger
-    blocks, the grid's measured error and the square of the share of the potential that
-    differs along the edge: the current that would cross it goes with that share, and so
-    does its effect.  An emitter with no sheet below it forces its current straight into the
-    bulk.
+    blocks, the grid's measured error and a multiple of the square of the share of the
+    potential that differs along the edge: the current that would cross it goes with that
+    share, and so does its effect.  An emitter with no sheet below it forces its current
+    straight into the bulk.
     """
     if kernel.floating and window.taps.count == 0:
         return unbounded(window, uses)
@@ -124,7 +130,8 @@ def _tap_patches(window: Window) -> tuple[Floats, Ints]:
         return taps.boxes, taps.owner
     distance = box_distances(taps.boxes, window.core.boxes).min(axis=1)
     near = np.sort(np.argsort(np.round(distance, 3), kind="stable")[:_NEAREST_TAPS])
-    boxes, index = graded_patches(taps.boxes[near], _PATCHES_ACROSS)
+    least = np.maximum(_PATCH_GROWTH * distance[near], _LEAST_PATCH_UM)
+    boxes, index = graded_patches(taps.boxes[near], _PATCHES_ACROSS, least_um=least)
     return boxes, taps.owner[near][index]
 
 
@@ -141,20 +148,34 @@ def _grid(window: Window) -> GridLines:
         margin = _MARGIN_STEPS * step
         inner = (max(float(low[axis]) - margin, start), min(float(high[axis]) + margin, stop))
         cuts = grow_lines(start, stop, inner, step, _LINE_GROWTH)
-        cuts = fit_lines(cuts, _tap_edges(window, axis))
+        cuts = fit_lines(cuts, _edges(window, axis))
         lines.append(cuts)
         blocks.append(block_intervals(cuts, inner, block, _BLOCK_GROWTH))
     return GridLines(x=lines[0], y=lines[1], block_x=blocks[0], block_y=blocks[1])
 
 
-def _tap_edges(window: Window, axis: int) -> Floats:
-    """Coordinates of the nearest taps' edges, the nearest first."""
-    taps = window.taps.boxes
-    if len(taps) == 0:
-        return np.zeros(0)
-    distance = box_distances(taps, window.core.boxes).min(axis=1)
-    order = np.argsort(np.round(distance, 3), kind="stable")[:_FITTED_TAPS]
-    return taps[order][:, [axis, axis + 2]].ravel()
+def _edges(window: Window, axis: int) -> Floats:
+    """Coordinates that grid lines shall hold, the most needed first.
+
+    The nearest taps' edges, then those of emitters close to a tap, between which little sheet
+    is left; at last all emitters' edges where rows or columns share a few.
+    """
+    taps, core = window.taps.boxes, window.core.boxes
+    sides = [axis, axis + 2]
+    found = [np.zeros(0)]
+    if len(taps):
+        distance = box_distances(taps, core)
+        order = np.argsort(np.round(distance.min(axis=1), 3), kind="stable")
+        low, high = window.box_um[axis], window.box_um[axis + 2]
+        tap = taps[order][:, sides].ravel()
+        tap = tap[(tap > low + 1e-6) & (tap < high - 1e-6)]
+        _, first = np.unique(np.round(tap, 3), return_index=True)
+        found.append(tap[np.sort(first)][:_FITTED_EDGES])
+        found.append(np.unique(core[distance.min(axis=0) < _CLOSE_UM][:, sides]))
+    shared = np.unique(core[:, sides])
+    if len(shared) <= _FITTED_EDGES:
+        found.append(shared)
+    return np.concatenate(found)
 
 
 def _fields(
@@ -169,13 +190,14 @@ def _fields(
     mean = np.diagonal(solved.mean_ohm).copy()
     flows = BulkCurrents(boxes=solved.block_boxes, current=solved.block_current, level=solved.level)
     with np.errstate(divide="ignore", invalid="ignore"):
-        error = _BLOCK_ERROR * solved.change_ohm / mean
-        error += (solved.rim_ohm / mean) ** 2 + _GRID_ERROR
+        rim = _RIM_ERROR * (solved.rim_ohm / mean) ** 2
+        error = _BLOCK_ERROR * solved.change_ohm / mean + rim + _GRID_ERROR
     return WindowFields(
         mean_ohm=mean,
         max_ohm=np.maximum(mean + _rise(window.core, conductance_s), solved.peak_ohm),
         patch_ohm=patch_means(solved.mean_ohm, window, patch_um, on_sheet),
         relative_error=error,
+        rim_error=rim,
         transfer_ohm=flows.transfers(uses, kernel),
     )
 
@@ -198,6 +220,7 @@ def _chosen(
         max_ohm=np.where(core, first.max_ohm, second.max_ohm),
         patch_ohm=np.where(core, first.patch_ohm, second.patch_ohm),
         relative_error=np.where(core, first.relative_error, second.relative_error),
+        rim_error=np.where(core, first.rim_error, second.rim_error),
         transfer_ohm=tuple(
             np.where(core[use.cathode], a, b)
             for use, a, b in zip(uses, first.transfer_ohm, second.transfer_ohm, strict=True)

@@ -20,9 +20,9 @@ from latchscan.parasitics.pieces import rectangle_pieces
 
 _ROUND = 4
 """Decimals of um kept in window coordinates; drawn coordinates are multiples of 1 nm."""
-_HALO_TAP_DISTANCES = 2.5
-_LEAST_HALO_UM = 15.0
-_MOST_HALO_UM = 120.0
+_HALO_TAP_DISTANCES = 3.0
+_LEAST_HALO_UM = 20.0
+MOST_HALO_UM = 120.0
 _MOST_TAPS = 60
 
 
@@ -97,6 +97,8 @@ class Window:
         (t,) contact resistance of each tap [ohm].
     box_um
         (4,) x0, y0, x1, y1 of the window [um].
+    halo_um
+        How far the window reaches beyond its core.
     sheet, holes
         (n, 4) rectangles of the p-well sheet without regard to its holes, and of these [um];
         empty where there is no sheet.
@@ -107,6 +109,7 @@ class Window:
     taps: Shapes
     series_ohm: Floats
     box_um: Floats
+    halo_um: float
     sheet: Floats
     holes: Floats
 
@@ -203,30 +206,53 @@ def box_distances(a: Floats, b: Floats) -> Floats:
     return np.hypot(np.maximum(dx, 0.0), np.maximum(dy, 0.0))
 
 
-def cut_windows(scene: SubstrateScene, pairs: Pairs, patch_um: float) -> list[WindowUses]:
-    """Every distinct window with its uses, in the order of their first use."""
-    cutter = _Cutter(scene=scene, patch_um=patch_um)
-    place = np.full(int(scene.emitter_index.max(initial=-1)) + 1, -1, dtype=np.int64)
-    place[scene.emitter_index] = np.arange(len(scene.emitter_index))
-    known = pairs.cathode < len(place)
-    row = np.full(len(pairs.cathode), -1, dtype=np.int64)
-    row[known] = place[pairs.cathode[known]]
-    order = np.argsort(row, kind="stable")
-    first = np.searchsorted(row[order], np.arange(len(scene.emitter_index) + 1))
-    found: dict[bytes, WindowUses] = {}
-    for group in cluster_emitters(scene.boxes_um):
-        window, anchor = cutter.cut(group)
-        chosen = [order[first[i] : first[i + 1]] for i in group]
-        indices = np.concatenate(chosen).astype(np.int64)
-        cathode = np.repeat(np.arange(len(group)), [len(c) for c in chosen])
-        arrivals = Arrivals(
-            emitters=scene.emitter_index[group],
-            pairs=indices,
-            cathode=cathode.astype(np.int64),
-            points_um=np.round(pairs.arrival_um[indices] - anchor, _ROUND) + 0.0,
+class WindowCutter:
+    """Cuts the scene into windows, each with the pairs that ask for it."""
+
+    def __init__(self, scene: SubstrateScene, pairs: Pairs, patch_um: float) -> None:
+        self._scene = scene
+        self._pairs = pairs
+        self._cutter = _Cutter(scene=scene, patch_um=patch_um)
+        place = np.full(int(scene.emitter_index.max(initial=-1)) + 1, -1, dtype=np.int64)
+        place[scene.emitter_index] = np.arange(len(scene.emitter_index))
+        known = pairs.cathode < len(place)
+        row = np.full(len(pairs.cathode), -1, dtype=np.int64)
+        row[known] = place[pairs.cathode[known]]
+        self._order = np.argsort(row, kind="stable")
+        self._first = np.searchsorted(row[self._order], np.arange(len(scene.emitter_index) + 1))
+
+    def all_windows(self) -> list[WindowUses]:
+        """Every distinct window with its uses, in the order of their first use."""
+        return self._cut([(group, 0.0) for group in cluster_emitters(self._scene.boxes_um)])
+
+    def wider(self, windows: list[WindowUses]) -> list[WindowUses]:
+        """Windows around the same emitters that reach twice as far, as far as that is allowed."""
+        return self._cut(
+            [
+                (
+                    np.searchsorted(self._scene.emitter_index, use.emitters),
+                    min(2.0 * window.window.halo_um, MOST_HALO_UM),
+                )
+                for window in windows
+                for use in window.uses
+            ]
         )
-        found.setdefault(window.key(), WindowUses(window=window)).uses.append(arrivals)
-    return list(found.values())
+
+    def _cut(self, groups: list[tuple[Ints, float]]) -> list[WindowUses]:
+        found: dict[bytes, WindowUses] = {}
+        for group, halo_um in groups:
+            window, anchor = self._cutter.cut(group, halo_um)
+            chosen = [self._order[self._first[i] : self._first[i + 1]] for i in group]
+            indices = np.concatenate(chosen).astype(np.int64)
+            cathode = np.repeat(np.arange(len(group)), [len(c) for c in chosen])
+            arrivals = Arrivals(
+                emitters=self._scene.emitter_index[group],
+                pairs=indices,
+                cathode=cathode.astype(np.int64),
+                points_um=np.round(self._pairs.arrival_um[indices] - anchor, _ROUND) + 0.0,
+            )
+            found.setdefault(window.key(), WindowUses(window=window)).uses.append(arrivals)
+        return list(found.values())
 
 
 class _Cutter:
@@ -242,8 +268,12 @@ class _Cutter:
         self._sheet = shapely.STRtree(shapely.box(*scene.sheet.T))
         self._holes = shapely.STRtree(shapely.box(*scene.holes.T))
 
-    def cut(self, group: Ints) -> tuple[Window, Floats]:
-        """Return the window around a group and its anchor (x, y) [um]."""
+    def cut(self, group: Ints, halo_um: float) -> tuple[Window, Floats]:
+        """Return the window around a group and its anchor (x, y) [um].
+
+        It reaches `halo_um` beyond the group, or as far as the taps' distances ask for where
+        that is 0.
+        """
         scene = self._scene
         boxes = scene.boxes_um[group]
         core_box = np.concatenate([boxes[:, :2].min(axis=0), boxes[:, 2:].max(axis=0)])
@@ -251,7 +281,8 @@ class _Cutter:
         near = self._emitters.query(shapely.box(*_grown(core_box, self._patch_um)))
         near = np.setdiff1d(near, group)
         near = near[(box_distances(scene.boxes_um[near], boxes) <= self._patch_um).any(axis=1)]
-        box = _grown(core_box, self._halo(boxes))
+        halo_um = halo_um or self._halo(boxes)
+        box = _grown(core_box, halo_um)
         taps, series = self._tap_pieces(box, core_box)
         window = Window(
             core=scene.emitters.take(group).moved(anchor),
@@ -259,6 +290,7 @@ class _Cutter:
             taps=taps.moved(anchor),
             series_ohm=series,
             box_um=np.round(box - np.tile(anchor, 2), _ROUND) + 0.0,
+            halo_um=halo_um,
             sheet=_clipped(scene.sheet, self._sheet, box, anchor),
             holes=_clipped(scene.holes, self._holes, box, anchor),
         )
@@ -274,7 +306,7 @@ class _Cutter:
         shapes = shapely.box(*boxes.T)
         _, distance = self._taps.query_nearest(shapes, all_matches=False, return_distance=True)
         wanted = _HALO_TAP_DISTANCES * float(distance.max())
-        halo = min(max(wanted, _LEAST_HALO_UM), _MOST_HALO_UM)
+        halo = min(max(wanted, _LEAST_HALO_UM), MOST_HALO_UM)
         return 5.0 * float(np.ceil(max(halo, 1.1 * float(distance.min()) + 1.0) / 5.0))
 
     def _tap_pieces(self, box: Floats, core_box: Floats) -> tuple[Shapes, Floats]:

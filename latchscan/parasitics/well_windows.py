@@ -255,20 +255,22 @@ def _fill_points(
     wanted = np.flatnonzero(source >= 0)
     if len(wanted) == 0:
         return
-    points = shapely.points(window.points_um[wanted])
+    # many pairs ask for the same place, each for its own source
+    places, which = np.unique(window.points_um[wanted], axis=0, return_inverse=True)
+    points = shapely.points(places)
     tree = shapely.STRtree(outline.parts)
     near, part = tree.query_nearest(points, all_matches=False)
     lines = shapely.shortest_line(points[near], outline.parts[part])
-    at = np.empty((len(wanted), 2))
+    at = np.empty((len(places), 2))
     at[near] = shapely.get_coordinates(lines)[1::2]
-    domain = np.full(len(wanted), -1)
+    domain = np.full(len(places), -1)
     domain[near] = np.where(used, np.cumsum(used) - 1, -1)[part]
     # a point on another piece of sheet feels nothing of these sources
-    value = np.zeros(len(wanted))
+    value = np.zeros((len(places), len(rows)))
     real = np.flatnonzero(domain >= 0)
-    potential = fine.potentials(at[real], domain[real]).mean(axis=0)
-    value[real] = potential[np.arange(len(real)), source[wanted[real]]]
-    result.point_ohm[wanted] = np.maximum(value, 0.0)
+    value[real] = fine.potentials(at[real], domain[real]).mean(axis=0)
+    own = value[which.reshape(-1), source[wanted]]
+    result.point_ohm[wanted] = np.maximum(own, 0.0)
 
 
 def _numbers(rows: Ints, count: int) -> Ints:

@@ -8,6 +8,8 @@ from latchscan.layout.model import Box
 
 _STEPS = (0.0, 12.0, 24.0, 36.0)
 """Gaps between thing and label that are tried, nearest first [page units]."""
+_INSET = 4.0
+"""Room between a box and a label inside it [page units]."""
 _SIDES = (
     (-1.0, -1.0),
     (1.0, -1.0),
@@ -31,9 +33,10 @@ class Places:
     def take(self, around: Box, width: float, height: float) -> tuple[float, float] | None:
         """Middle of a free label of the given size beside the box `around`.
 
-        None where nothing near is free; a label that hides others helps nobody.
+        In a corner of the box where nothing beside it is free, as for a box that fills the
+        area.  None where that is taken too; a label that hides others helps nobody.
         """
-        for gap in _STEPS:
+        for gap in (*_STEPS, *_inward_steps(around, width, height)):
             for side in _SIDES:
                 box = _moved(around, width, height, side, gap)
                 if _contains(self.area, box) and not any(
@@ -42,6 +45,12 @@ class Places:
                     self.taken.append(box)
                     return ((box[0] + box[2]) / 2, (box[1] + box[3]) / 2)
         return None
+
+
+def _inward_steps(around: Box, width: float, height: float) -> tuple[float, ...]:
+    """The gap that puts a label just inside a box large enough not to be hidden by it."""
+    roomy = around[2] - around[0] > 3 * width and around[3] - around[1] > 3 * height
+    return (-max(width, height) - _INSET,) if roomy else ()
 
 
 def _moved(around: Box, width: float, height: float, side: tuple[float, float], gap: float) -> Box:

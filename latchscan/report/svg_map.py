@@ -8,6 +8,7 @@ network, a script or an installed font.
 from __future__ import annotations
 
 import base64
+import math
 from xml.etree.ElementTree import Element, tostring
 
 import numpy as np
@@ -29,7 +30,7 @@ from latchscan.report.palette import (
 )
 from latchscan.report.placing import Places
 from latchscan.report.plain import plain_text
-from latchscan.report.svg_marks import add_findings, add_injectors, add_sites
+from latchscan.report.svg_marks import add_findings, add_injectors, add_sites, site_boxes
 from latchscan.report.svg_panel import WIDTH as PANEL_WIDTH
 from latchscan.report.svg_panel import add_panel
 from latchscan.report.svg_parts import add, add_text, add_title, number, shortened
@@ -41,6 +42,8 @@ SMALLEST_PAGE_HEIGHT = 877.0
 """With the width this makes A4 landscape."""
 MAP_AREA = (70.0, 92.0, 850.0, 812.0)
 """Where the map may lie: x0, y0, x1, y1 on the page."""
+_TICK_ROOM = 12.0
+"""Least distance of two numbers along the left edge."""
 _PANEL_LEFT = PAGE_WIDTH - PANEL_WIDTH - 24
 
 
@@ -93,7 +96,11 @@ def _add_map(root: Element, scan: Scan, frame: Frame, field: Field) -> None:
     add(root, "rect", **edge, fill="none", stroke=FAINT_INK, stroke_width=0.8)
     _add_scale_bar(root, frame)
     area = (frame.left, frame.top, frame.left + frame.width, frame.top + frame.height)
-    places = Places(area=(area[0] - 8, area[1] - 8, area[2] + 8, area[3] + 8))
+    places = Places(
+        area=(area[0] - 8, area[1] - 8, area[2] + 8, area[3] + 8),
+        # no number may hide a site's mark
+        taken=site_boxes(scan.evidence, frame),
+    )
     add_findings(root, scan.findings, frame, places)
     add_injectors(root, scan.evidence, frame, places)
     add_sites(root, scan.evidence, frame, places)
@@ -157,8 +164,12 @@ def _add_axes(root: Element, frame: Frame) -> None:
         x = frame.x(value)
         add(group, "path", d=f"M{number(x)} {number(bottom)}v5", stroke=FAINT_INK)
         add_text(group, x, bottom + 17, f"{value:g}", fill=FAINT_INK, text_anchor="middle")
+    last = math.inf
     for value in ticks(y0, y1, max(2, int(frame.height / 90))):
         y = frame.y(value)
+        if last - y < _TICK_ROOM:
+            continue
+        last = y
         add(group, "path", d=f"M{number(frame.left)} {number(y)}h-5", stroke=FAINT_INK)
         add_text(group, frame.left - 8, y + 4, f"{value:g}", fill=FAINT_INK, text_anchor="end")
     add_text(group, frame.left, bottom + 34, "x and y in um", fill=FAINT_INK)

@@ -150,6 +150,16 @@ def add_sites(parent: Element, evidence: Evidence, frame: Frame, places: Places)
         add(member, "path", d=diamond(x, y), fill=PAPER, stroke=INK, stroke_width=1.2)
 
 
+def site_boxes(evidence: Evidence, frame: Frame) -> list[Box]:
+    """Page boxes of the marks of the worst sites."""
+    sites = evidence.sites
+    middles = (
+        (frame.x(float(sites.x_um[row])), frame.y(float(sites.y_um[row])))
+        for row in marked_sites(evidence, frame)
+    )
+    return [(x - _DIAMOND, y - _DIAMOND, x + _DIAMOND, y + _DIAMOND) for x, y in middles]
+
+
 def diamond(x: float, y: float) -> str:
     """Path of a site's mark with its middle at (x, y)."""
     reach = number(_DIAMOND)

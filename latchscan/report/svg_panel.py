@@ -123,7 +123,7 @@ def _add_site_list(
     for letter, row in zip(SITE_LETTERS, marked_sites(evidence, frame), strict=False):
         add_text(group, x, y, letter, font_weight="bold")
         add_text(group, x + 18, y, f"gain {measure(float(sites.loop_gain[row]), '1')}")
-        add_text(group, x + 98, y, _fired(float(sites.trigger_current_a[row])))
+        add_text(group, x + 106, y, _fired(float(sites.trigger_current_a[row])))
         add_text(
             group, x + WIDTH, y, f"at {sites.x_um[row]:.2f}, {sites.y_um[row]:.2f} um",
             text_anchor="end", fill=FAINT_INK,
@@ -169,4 +169,6 @@ def _measured(finding: Finding) -> str:
 
 def _fired(trigger_current_a: float) -> str:
     """What it takes to fire a site."""
-    return f"fired by {current(trigger_current_a)}" if math.isfinite(trigger_current_a) else "-"
+    if not math.isfinite(trigger_current_a):
+        return "nothing fires it"
+    return f"fired by {current(trigger_current_a)}"

@@ -20,6 +20,7 @@ from __future__ import annotations
 import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from difflib import get_close_matches
 from typing import NamedTuple, TypeAlias
 
 from latchscan.errors import TechnologyError
@@ -221,7 +222,13 @@ class _Parser:
     def operand(self) -> Expression:
         token = self.next
         if token.kind == "word":
-            return Name(self.take().text)
+            self.take()
+            if self.next.kind == "(":
+                # a name with a forgotten operator behind it is as likely as a misspelt function
+                for near in get_close_matches(token.text, FUNCTIONS, 1):
+                    message = f"undefined function `{token.text}`, expected `{near}`"
+                    raise ExpressionError(message, token.column)
+            return Name(token.text)
         if token.kind == "(":
             self.deeper(self.take())
             item = self.either()

@@ -54,6 +54,8 @@ def find_technology(path_or_name: str | Path) -> Path:
         If neither exists; the hint names the shipped technologies.
     """
     asked = str(path_or_name)
+    if not asked:
+        raise TechnologyError("technology: expected a path or a shipped name, got nothing")
     given = Path(asked)
     try:
         if given.exists():

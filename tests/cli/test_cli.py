@@ -6,6 +6,7 @@ import io
 import json
 import os
 import resource
+import signal
 import subprocess
 import sys
 from collections.abc import Sequence
@@ -114,6 +115,9 @@ def test_options_reach_the_scan(pipeline: list[Any], tmp_path: Path) -> None:
         (("--temperature", "1000"), "-55 to 200"),
         (("--temperature", "hot"), "--temperature"),
         (("--jobs", "0"), "--jobs"),
+        (("--jobs", "100000"), "--jobs"),
+        (("--out", ""), "expected a path, got nothing"),
+        (("--tech", ""), "expected a path or a shipped name, got nothing"),
         (("--colour",), "--colour"),
         (("--tech", "no_such_technology"), "no_such_technology"),
     ],
@@ -250,6 +254,68 @@ def test_a_reader_that_leaves_early_is_no_error() -> None:
             timeout=60,
         )
     assert (shown.returncode, shown.stderr) == (0, "")
+
+
+def test_a_full_standard_output_is_one_clear_error() -> None:
+    with Path("/dev/full").open("w") as full:
+        shown = subprocess.run(
+            [sys.executable, "-m", "latchscan", "tech", "schema"],
+            stdout=full,
+            stderr=subprocess.PIPE,
+            text=True,
+            check=False,
+            timeout=60,
+        )
+    line = "latchscan: error: standard output: cannot be written: no space left on device\n"
+    assert (shown.returncode, shown.stderr) == (2, line)
+
+
+@pytest.mark.parametrize("closed", ["<&-", ">&-", "2>&-", "<&- >&- 2>&-"])
+def test_closed_standard_streams_are_no_error(closed: str) -> None:
+    command = f'"{sys.executable}" -m latchscan tech check larch180 {closed}'
+    shown = subprocess.run(
+        ["/bin/sh", "-c", command], capture_output=True, text=True, check=False, timeout=60
+    )
+    assert (shown.returncode, shown.stderr) == (0, "")
+
+
+@pytest.mark.parametrize("to_all", [False, True], ids=["process", "group"])
+@pytest.mark.parametrize(
+    ("number", "words"),
+    [(signal.SIGINT, "stopped from the keyboard"), (signal.SIGTERM, "stopped by SIGTERM")],
+)
+def test_a_stopped_scan_says_so_once_and_leaves_the_old_files(
+    tmp_path: Path, number: signal.Signals, words: str, to_all: bool
+) -> None:
+    (tmp_path / "scan.json").write_text("old", encoding="utf-8")
+    code = (
+        "import sys, time, latchscan.scan, latchscan.layout.source\n"
+        "from latchscan.cli import run\n"
+        "def scan(source, loaded, options, workers):\n"
+        "    workers.map('start', time.sleep, [0.01] * 4)\n"
+        "    print('ready', flush=True)\n"
+        "    workers.map('wait', time.sleep, [0.1] * 600)\n"
+        "latchscan.layout.source.open_layout = lambda path, **_: path\n"
+        "latchscan.scan.scan = scan\n"
+        "sys.exit(run(['scan', 'a.gds', '--tech', 'larch180', '--jobs', '2', '--out',"
+        " sys.argv[1]]))\n"
+    )
+    with subprocess.Popen(
+        [sys.executable, "-c", code, str(tmp_path)],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        start_new_session=True,
+    ) as program:
+        assert program.stdout is not None
+        assert program.stdout.readline() == "ready\n"
+        (os.killpg if to_all else os.kill)(program.pid, number)
+        _, said = program.communicate(timeout=20)
+    assert (program.returncode, said) == (128 + number, f"latchscan: error: {words}\n")
+    with pytest.raises(ProcessLookupError):
+        os.killpg(program.pid, 0)
+    assert [path.name for path in tmp_path.iterdir()] == ["scan.json"]
+    assert (tmp_path / "scan.json").read_text(encoding="utf-8") == "old"
 
 
 def test_tech_check_lists_problems_and_tech_schema_is_json(

@@ -293,6 +293,24 @@ def test_names_that_are_no_text(tmp_path):
     assert "no UTF-8" in outcome(written(tmp_path / "name.gds", library))
 
 
+@pytest.mark.parametrize("cut", [1, 100, 255, 256])
+def test_an_oasis_file_cut_within_its_last_record(tmp_path, cut):
+    # END is 256 bytes long (SEMI P39, section 14), whatever it holds
+    library = gdstk.Library()
+    library.new_cell("one").add(gdstk.rectangle((0, 0), (1, 1), layer=1))
+    path = tmp_path / "one.oas"
+    library.write_oas(path)
+    assert outcome(path) == ""
+    assert outcome(written(path, path.read_bytes()[:-cut]))
+
+
+def test_a_reader_that_cannot_be_started_is_not_the_file_s_fault(tmp_path, monkeypatch):
+    path = tmp_path / "sound.gds"
+    path.write_bytes(gds.library(gds.cell(b"top", SQUARE)))
+    monkeypatch.setattr("sys.executable", str(tmp_path))
+    assert "its reader could not be started" in outcome(path)
+
+
 def test_a_bomb_inside_an_oasis_block_is_stopped(tmp_path, monkeypatch):
     # OASIS packs records into deflated blocks (SEMI P39, record CBLOCK = 34)
     packer = zlib.compressobj(9, zlib.DEFLATED, -15)

@@ -315,6 +315,56 @@ def test_reach_lies_within_plain_subdivision() -> None:
         assert low <= found.tap_reach_um[i] <= high
 
 
+def fields(rng: np.random.Generator, tap: Any, pitch: float, kind: str) -> list[Box]:
+    """Contacts of 0.2 um all over a tap: in a grid, staggered, with gaps, or anywhere."""
+    x0, y0, x1, y1 = tap.bounds
+    found = []
+    for row, y in enumerate(np.arange(y0 + 0.1, y1 - 0.3, pitch)):
+        shift = 0.5 * pitch * (row % 2) if kind == "staggered" else 0.0
+        for x in np.arange(x0 + 0.1 + shift, x1 - 0.3, pitch):
+            if kind == "gaps" and rng.random() < 0.2:
+                continue
+            moved = rng.integers(-10, 10, 2) * GRID_UM if kind == "anywhere" else (0.0, 0.0)
+            left, low = round(x + moved[0], 3), round(y + moved[1], 3)
+            box = (left, low, round(left + 0.2, 3), round(low + 0.2, 3))
+            if tap.contains(shapely.box(*box)):
+                found.append(box)
+    return found
+
+
+@pytest.mark.parametrize("kind", ["grid", "staggered", "gaps", "anywhere"])
+def test_reach_of_taps_full_of_contacts_is_that_of_the_plain_search(kind: str) -> None:
+    rng = np.random.default_rng(9)
+    bar = shapely.box(0, 0, 12, 1.3)
+    ring = shapely.box(20, 0, 30, 9) - shapely.box(21.2, 1.1, 28.9, 8)
+    bent = shapely.Polygon([(0, 5), (9, 5), (9, 7), (2, 7), (2, 14), (0, 14)])
+    slanted = shapely.Polygon([(12, 5), (17, 5), (18, 6), (18, 12), (12, 12)])
+    taps = column([bar, ring, bent, slanted, shapely.box(40, 0, 41, 1)])
+    contacts = [fields(rng, tap, 0.45, kind) for tap in taps[:4]]
+    owner = np.repeat(np.arange(4), [len(boxes) for boxes in contacts])
+    boxes = np.array([box for part in contacts for box in part])
+    assert len(boxes) > 150
+    found = farthest.farthest_in_crowds(taps, boxes, owner)
+    plain = farthest_points(taps, np.arange(5), shapely.box(*boxes.T), owner)
+    assert np.isnan(found.distance_um[4])
+    assert np.nanmax(np.abs(found.distance_um - plain.distance_um)) <= EXACT_UM
+    assert np.nanmax(np.abs(found.at_um - plain.at_um)) <= 1e-6
+    for row in range(4):
+        low, high = bracket(taps[row], shapely.multipolygons(shapely.box(*boxes[owner == row].T)))
+        assert low - EXACT_UM <= found.distance_um[row] <= high + EXACT_UM
+
+
+def test_reach_in_a_regular_field_by_hand() -> None:
+    # squares of 0.2 um, 0.4 um apart, flush with the tap's edges: the centre of four squares
+    # lies half the diagonal of the gap away, and of all centres the lowest leftmost counts
+    x, y = (axis.ravel() for axis in np.meshgrid(np.arange(9) * 0.6, np.arange(6) * 0.6))
+    boxes = np.round(np.column_stack([x, y, x + 0.2, y + 0.2]), 3)
+    tap = column([shapely.box(0, 0, 5.0, 3.2)])
+    found = farthest.farthest_in_crowds(tap, boxes, np.zeros(len(boxes), dtype=np.int64))
+    assert found.distance_um[0] == pytest.approx(0.2 * np.sqrt(2.0), abs=1e-9)
+    assert found.at_um[0] == pytest.approx([0.4, 0.4], abs=1e-9)
+
+
 def test_many_groups_far_apart_do_not_see_each_other() -> None:
     # by hand: every group is a bar of 4 um with a tap 1 um beyond its right end
     k = np.arange(400)

@@ -276,6 +276,17 @@ def test_ties_of_a_regular_array_go_by_index_wherever_it_stands() -> None:
     assert answers[0] == answers[1]
 
 
+def test_targets_in_few_clusters_match_the_whole_table() -> None:
+    rng = np.random.default_rng(21)
+    clusters = [scattered(rng, 60, 4.0), scattered(rng, 90, 10.0)]
+    moved = shapely.transform(clusters[1], lambda points: points + np.array([400.0, 300.0]))
+    targets = np.concatenate([clusters[0], moved])
+    sources = scattered(rng, 80, 40.0)
+    found = nearest_few(sources, targets, count=6, reach_um=900.0)
+    pairs = set(zip(found.source.tolist(), found.target.tolist(), strict=True))
+    assert pairs == by_table(sources, targets, 6, 900.0)
+
+
 def test_a_single_row_of_targets_is_found_whole() -> None:
     targets = shapely.box(np.arange(50.0) * 9, 0.0, np.arange(50.0) * 9 + 1, 0.01)
     sources = column([shapely.box(200, 3, 201, 4)])

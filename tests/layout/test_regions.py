@@ -254,6 +254,41 @@ def test_only_contacts_on_taps_are_carried_and_each_once():
             assert regions.contact_box_um.round(9).tolist() == expected
 
 
+@pytest.mark.parametrize("seed", [1, 2])
+def test_contacts_on_taps_of_any_shape_are_those_of_shapely(seed):
+    rng = np.random.default_rng(seed)
+    ring = [(2000, 2000), (18_000, 2000), (18_000, 18_000), (2000, 18_000), (2000, 9000),
+            (3000, 9000), (3000, 17_000), (17_000, 17_000), (17_000, 3000), (3000, 3000),
+            (3000, 9000), (2000, 9000)]  # fmt: skip
+    slanted = [(5000, 5000), (12_000, 5000), (14_000, 7000), (14_000, 12_000), (7000, 12_000)]
+    thin = rectangle(15_000, 6000, 15_001, 12_000)
+    low = rng.integers(0, 19_800, (2500, 2))
+    bent = [(8000, 15_800), (8600, 15_800), (8600, 16_000), (8200, 16_000), (8200, 17_100),
+            (8000, 17_100)]  # fmt: skip
+    shapes = {
+        "active": [ring, slanted, thin],
+        "pplus": [rectangle(0, 0, 20_000, 20_000)],
+        "contact": [rectangle(x, y, x + 70, y + 70) for x, y in low.tolist()] + [bent],
+    }
+    found = [
+        derive(only(shapes), window_um=window_um, tile_um=tile_um)
+        for window_um, tile_um in ((4.0, 7.0), (100.0, 500.0))
+    ]
+    assert as_bytes(found[0]) == as_bytes(found[1])
+    taps = shapely.union_all(found[0].shapes["substrate_tap"])
+    drawn = shapely.box(*np.hstack([low, low + 70]).T / 1000.0)
+    on_tap = np.append(drawn, shapely.box(8.0, 15.8, 8.6, 17.1))
+    on_tap = on_tap[shapely.area(shapely.intersection(on_tap, taps)) > 1e-9]
+    groups = shapely.get_parts(shapely.union_all(on_tap))
+    # touching groups merge to their boxes; where boxes of groups meet in turn is rare
+    boxes = shapely.box(*shapely.bounds(groups).T)
+    while len(merged := shapely.get_parts(shapely.union_all(boxes))) < len(boxes):
+        boxes = shapely.box(*shapely.bounds(merged).T)
+    expected = np.round(shapely.bounds(boxes), 6)
+    expected = expected[np.lexsort((expected[:, 0], expected[:, 1]))]
+    assert np.array_equal(found[0].contact_box_um.round(6), expected)
+
+
 def test_a_window_limits_the_box_and_the_labels():
     texts = tuple(
         Label(text=t, layer=60, texttype=0, x_um=x, y_um=5.0) for t, x in [("IN", 3.0), ("B", 15.0)]

@@ -286,6 +286,18 @@ def test_texts_are_placed_like_shapes(tmp_path):
     assert {(label.layer, label.texttype) for label in labels} == {(3, 0)}
 
 
+def test_near_gives_what_windows_give_box_by_box(tmp_path):
+    source = open_layout(crowded(tmp_path / "crowded.gds"), technology=technology())
+    rng = np.random.default_rng(5)
+    low = rng.integers(-230_000, 230_000, (25, 2))
+    boxes = np.hstack([low, low + rng.choice([0, 1, 900, 60_000], (25, 2))])
+    near = source.near(boxes, [PAIR])[PAIR]
+    single = [source.window(tuple(box), [PAIR])[PAIR] for box in boxes.tolist()]
+    expected = sorted(canonical(points) for columns in single for points in outlines(columns))
+    assert len(expected) > 200
+    assert sorted(canonical(points) for points in outlines(near)) == expected
+
+
 def test_repeat_pitch_of_an_array_with_straps(tmp_path):
     library = gdstk.Library()
     bit = leaf(library)
@@ -297,6 +309,18 @@ def test_repeat_pitch_of_an_array_with_straps(tmp_path):
     top.add(gdstk.Reference(row, (0, 0), columns=6, rows=20, spacing=(8 * 5 + 1.7, 6)))
     source = open_layout(save(library, tmp_path / "sram.gds"), technology=technology())
     assert source.repeat_pitch_dbu() == (41_700, 6_000)
+
+
+def test_arrays_of_contacts_hide_no_repeat_pitch(tmp_path):
+    library = gdstk.Library()
+    contact = library.new_cell("contact")
+    contact.add(gdstk.rectangle((0, 0), (0.2, 0.2), layer=1))
+    bit = leaf(library)
+    top = library.new_cell("top")
+    top.add(gdstk.Reference(bit, (0, 0), columns=30, rows=20, spacing=(7, 3)))
+    top.add(gdstk.Reference(contact, (0.1, 80.3), columns=200, rows=70, spacing=(0.5, 0.5)))
+    source = open_layout(save(library, tmp_path / "field.gds"), technology=technology())
+    assert source.repeat_pitch_dbu() == (7_000, 3_000)
 
 
 def test_no_repeat_pitch_without_repetition(tmp_path):

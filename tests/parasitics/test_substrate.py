@@ -11,6 +11,7 @@ import pytest
 import shapely
 from space_grid import Problem, extrapolated
 
+from latchscan.fields.layered import tabulate_kernel
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     SUBSTRATE_TAP,
@@ -22,9 +23,12 @@ from latchscan.layout.model import (
     Taps,
 )
 from latchscan.parasitics.clusters import cluster_emitters, repeat_pitch
+from latchscan.parasitics.material import pwell_temperature_factor
 from latchscan.parasitics.model import BodyFields
 from latchscan.parasitics.pieces import rectangle_pieces
-from latchscan.parasitics.substrate import solve_substrate
+from latchscan.parasitics.substrate import solve_substrate, substrate_stack
+from latchscan.parasitics.substrate_sheet import solve_sheet_window
+from latchscan.parasitics.substrate_windows import MOST_HALO_UM, WindowCutter, substrate_scene
 from latchscan.tasks import Workers
 
 Box = tuple[float, float, float, float]
@@ -316,3 +320,42 @@ def test_rectangles_keep_the_area_of_any_polygon() -> None:
     boxes, owner = rectangle_pieces(shapes)
     area = (boxes[:, 2] - boxes[:, 0]) * (boxes[:, 3] - boxes[:, 1])
     np.testing.assert_allclose(np.bincount(owner, area), shapely.area(shapes), rtol=1e-9)
+
+
+def test_wider_windows_hold_the_same_emitters() -> None:
+    block = layout([(6, -2, 8, 2), (10, -2, 12, 2)], TAPS, SHEET)
+    scene = substrate_scene(block, 9.0, with_sheet=True)
+    cutter = WindowCutter(scene, pairs([0, 1], [(1.0, 1.0), (2.0, 2.0)]), 10.0)
+    windows = cutter.all_windows()
+    halo = windows[0].window.halo_um
+    for _ in range(6):
+        wide = cutter.wider(windows)
+        assert wide[0].window.halo_um == min(2.0 * windows[0].window.halo_um, MOST_HALO_UM)
+        for before, after in zip(windows[0].uses, wide[0].uses, strict=True):
+            np.testing.assert_array_equal(before.emitters, after.emitters)
+            np.testing.assert_array_equal(before.points_um, after.points_um)
+        windows = wide
+    assert halo < windows[0].window.halo_um == MOST_HALO_UM
+
+
+def test_a_window_too_small_is_widened() -> None:
+    # one small tap beside the emitter, another far away: the first window is chosen by the near
+    # tap and ends where current still flows in the sheet
+    wide = shapely.box(-150, -150, 150, 150)
+    taps: list[Box] = [(-1, -1, 1, 1), (60, -150, 62, 150)]
+    block = layout([(6, -2, 8, 2)], taps, wide)
+    found = solve(block, pairs([], []), technology(2500.0)).resistances
+    assert found.relative_error[0] < 0.08
+    # a window of nearly the whole layout is the reference
+    scene = substrate_scene(block, 9.0, with_sheet=True)
+    cutter = WindowCutter(scene, pairs([], []), 10.0)
+    windows = cutter.all_windows()
+    for _ in range(4):
+        windows = cutter.wider(windows)
+    factor = pwell_temperature_factor(technology(2500.0), TEMPERATURE_K)
+    kernel = tabulate_kernel(substrate_stack(technology(2500.0), factor), 2000.0)
+    solved = solve_sheet_window(
+        windows[0].window, tuple(windows[0].uses), kernel, 1.0 / (factor * 2500.0), 10.0
+    )
+    change = found.mean_ohm[0] / solved.mean_ohm[0] - 1.0
+    assert abs(change) < found.relative_error[0] + solved.relative_error[0]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from dataclasses import replace
 from xml.etree import ElementTree
 
 import numpy as np
@@ -11,6 +12,7 @@ import shapely
 import synthetic_scan
 
 from latchscan.report.frame import Frame, fit, round_length, ticks
+from latchscan.report.placing import Places
 from latchscan.report.svg_map import MAP_AREA, heatmap_svg
 from latchscan.report.svg_paths import path_data
 from latchscan.scan import Scan
@@ -77,6 +79,28 @@ def test_worst_sites_and_injectors_are_marked(root: ElementTree.Element) -> None
     assert 1 < len(marks) <= 10
     assert "trigger current" in (marks[0][0].text or "")
     assert "▲ drive" in texts(root)
+
+
+def test_a_finding_as_large_as_the_block_is_numbered_inside_it(scan: Scan) -> None:
+    finding = replace(scan.findings[0], box_um=scan.evidence.layout.regions.bbox_um)
+    root = ElementTree.fromstring(heatmap_svg(replace(scan, findings=(finding,))))
+    numbers = [g for g in root.iter(f"{SVG}g") if g.get("class") == "finding-number"]
+    assert [text.text for text in numbers[0].iter(f"{SVG}text")] == ["1"]
+
+
+def test_no_number_hides_the_mark_of_a_site() -> None:
+    mark = (100.0, 100.0, 110.0, 110.0)
+    places = Places(area=(0.0, 0.0, 300.0, 300.0), taken=[mark])
+    x, y = places.take((112.0, 112.0, 130.0, 130.0), 15.0, 15.0) or (105.0, 105.0)
+    assert max(abs(x - 105.0), abs(y - 105.0)) >= 12.5
+
+
+def test_labels_in_a_full_area_go_inside_a_large_box_or_nowhere() -> None:
+    area = (0.0, 0.0, 100.0, 100.0)
+    places = Places(area=area)
+    assert places.take(area, 15.0, 15.0) is not None
+    assert Places(area=area, taken=[area]).take(area, 15.0, 15.0) is None
+    assert Places(area=(0.0, 0.0, 20.0, 20.0)).take((0.0, 0.0, 20.0, 20.0), 15.0, 15.0) is None
 
 
 def test_hostile_names_are_shown_as_text(scan: Scan) -> None:

@@ -103,6 +103,8 @@ def test_precedence_is_that_of_python(text: str) -> None:
         ("a)", 2, "expected the end, got `)`"),
         ("a, b", 2, "expected the end, got `,`"),
         ("and a", 1, "got `and`"),
+        ("a and grwo(b, 1.0)", 7, "undefined function `grwo`, expected `grow`"),
+        ("a (b)", 3, "expected `and` or `or` before `(`"),
         ("grow a", 6, "expected `(` after `grow`"),
         ("grow(a)", 7, "expected `,` and a length in um"),
         ("grow(a, b)", 9, "expected a length in um such as 1.0, got `b`"),

@@ -1,0 +1,71 @@
+"""Worker processes: results in order, a lost worker is one error, nobody outlives the parent."""
+
+from __future__ import annotations
+
+import multiprocessing
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import pytest
+
+from latchscan.errors import AnalysisError
+from latchscan.tasks import Silent, open_workers
+
+
+def test_results_come_in_the_order_of_the_items() -> None:
+    with open_workers(2, Silent()) as workers:
+        assert workers.map("squares", abs, list(range(-9, 0))) == list(range(9, 0, -1))
+
+
+def test_a_lost_worker_is_one_clear_error_and_nobody_waits_for_the_others() -> None:
+    begin = time.monotonic()
+    with (
+        pytest.raises(AnalysisError, match="a worker process was lost") as caught,
+        open_workers(2, Silent()) as workers,
+    ):
+        workers.map("wells", _lost_or_slow, [0.0, 60.0, 60.0])
+    assert caught.value.exit_status == 3
+    assert "--jobs" in caught.value.hint
+    assert time.monotonic() - begin < 30
+    while multiprocessing.active_children():
+        assert time.monotonic() - begin < 30, "workers still run"
+        time.sleep(0.02)
+
+
+def _lost_or_slow(seconds: float) -> None:
+    if seconds == 0:
+        os._exit(7)
+    time.sleep(seconds)
+
+
+def test_workers_end_with_a_parent_that_is_killed() -> None:
+    code = (
+        "import multiprocessing, time\n"
+        "from latchscan.tasks import Silent, open_workers\n"
+        "with open_workers(2, Silent()) as workers:\n"
+        "    workers.map('start', time.sleep, [0.01] * 4)\n"
+        "    print(*(child.pid for child in multiprocessing.active_children()), flush=True)\n"
+        "    time.sleep(60)\n"
+    )
+    with subprocess.Popen([sys.executable, "-c", code], stdout=subprocess.PIPE) as parent:
+        assert parent.stdout is not None
+        children = [int(word) for word in parent.stdout.readline().split()]
+        parent.send_signal(signal.SIGKILL)
+    assert len(children) == 2
+    end = time.monotonic() + 20
+    while any(_runs(child) for child in children):
+        assert time.monotonic() < end, "workers still run"
+        time.sleep(0.02)
+
+
+def _runs(process: int) -> bool:
+    """Whether a process is there and not merely waiting to be reaped."""
+    try:
+        state = Path(f"/proc/{process}/stat").read_text(encoding="utf-8").rpartition(")")[2]
+    except FileNotFoundError:
+        return False
+    return state.split()[0] != "Z"
