@@ -98,7 +98,11 @@ def describe(evidence: Evidence, breaks: Breaks, row: int, count: int) -> str:
             " around it by hand."
         )
     trigger = evidence.sites.trigger_current_a[site]
-    fires = f", fired by {trigger * 1e3:.3g} mA" if np.isfinite(trigger) else ""
+    fires = (
+        f", fired by {trigger * 1e3:.3g} mA"
+        if np.isfinite(trigger)
+        else " (no current fires it alone, for its gains fall at high current)"
+    )
     return (
         f"The loop gain of {names} at {at} is {breaks.measured[row]:.3g}{others}{fires}, more"
         f" than the limit of {breaks.limit[row]:g}; add taps beside the anode and the cathode or"
