@@ -3,7 +3,7 @@
 In goes a `Layout`; out come `Distances` for every emitter and tap and `Spacings` for every
 injector.  Tap distance and tap reach are the same question asked of different shapes (which
 point of this shape is farthest from the nearest of those?) and share
-`latchscan.layout.farthest`; spacings are smallest distances between whole polygons.
+`latchscan.layout.measure.farthest`; spacings are smallest distances between whole polygons.
 """
 
 from __future__ import annotations
@@ -13,7 +13,7 @@ from itertools import pairwise
 import numpy as np
 import shapely
 
-from latchscan.layout.farthest import Farthest, farthest_in_crowds, farthest_points
+from latchscan.layout.measure.farthest import Farthest, farthest_in_crowds, farthest_points
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     P_IN_NWELL,

@@ -13,6 +13,7 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from latchscan.layout.derive.slabs import upright_parts
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     P_IN_NWELL,
@@ -26,7 +27,6 @@ from latchscan.layout.model import (
     Taps,
     frozen,
 )
-from latchscan.layout.slabs import upright_parts
 from latchscan.technology.model import Labels, Technology
 
 MARKED = "marker"

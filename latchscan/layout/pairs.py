@@ -14,6 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
+from latchscan.layout.measure.neighbours import Neighbours, first_few, joined, nearest_few
+from latchscan.layout.measure.walls import nearest_on_walls
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     P_IN_NWELL,
@@ -26,8 +28,6 @@ from latchscan.layout.model import (
     Pairs,
     frozen,
 )
-from latchscan.layout.neighbours import Neighbours, first_few, joined, nearest_few
-from latchscan.layout.walls import nearest_on_walls
 
 NEAREST = 6
 """Partners that each anode and each cathode keeps."""

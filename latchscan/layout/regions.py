@@ -16,9 +16,12 @@ import numpy as np
 import shapely
 
 from latchscan.errors import LayoutError, OptionError
-from latchscan.layout.contacts import distinct_boxes, merged_across, merged_boxes
-from latchscan.layout.derivation import DRAWN_REGIONS, TAPS, Program, compile_program
-from latchscan.layout.geometry import SUBGRID, rings_to_polygons
+from latchscan.layout.derive.contacts import distinct_boxes, merged_across, merged_boxes
+from latchscan.layout.derive.derivation import DRAWN_REGIONS, TAPS, Program, compile_program
+from latchscan.layout.derive.geometry import SUBGRID, rings_to_polygons
+from latchscan.layout.derive.stitching import Rings, join_rings, select_rings, sort_rings, stitch
+from latchscan.layout.derive.tiles import Pair, TileResult, TileTask, derive_tiles
+from latchscan.layout.derive.windows import BoxDbu
 from latchscan.layout.model import (
     REGION_NAMES,
     Box,
@@ -30,9 +33,6 @@ from latchscan.layout.model import (
     frozen,
 )
 from latchscan.layout.source import LayoutSource
-from latchscan.layout.stitching import Rings, join_rings, select_rings, sort_rings, stitch
-from latchscan.layout.tiles import Pair, TileResult, TileTask, derive_tiles
-from latchscan.layout.windows import BoxDbu
 from latchscan.tasks import Workers
 from latchscan.technology.model import Technology
 

@@ -14,15 +14,15 @@ from pathlib import Path
 import numpy as np
 
 from latchscan.caveats import Caveat
-from latchscan.layout.guard import file_sha256, read_layout
-from latchscan.layout.hierarchy import parents_first, polygon_counts
-from latchscan.layout.library import Library
+from latchscan.layout.file.guard import file_sha256, read_layout
+from latchscan.layout.file.hierarchy import parents_first, polygon_counts
+from latchscan.layout.file.library import Library
+from latchscan.layout.file.pitch import repeat_pitch
+from latchscan.layout.file.placements import all_placements
+from latchscan.layout.file.settling import bounding_box, choose_top, layer_notes, refuse_missing
+from latchscan.layout.file.tables import Pair
+from latchscan.layout.file.walk import PolygonColumns
 from latchscan.layout.model import Box, Ints, Label
-from latchscan.layout.pitch import repeat_pitch
-from latchscan.layout.placements import all_placements
-from latchscan.layout.settling import bounding_box, choose_top, layer_notes, refuse_missing
-from latchscan.layout.tables import Pair
-from latchscan.layout.walk import PolygonColumns
 from latchscan.technology.model import Technology
 
 __all__ = ["LayoutSource", "PolygonColumns", "open_layout"]

@@ -15,7 +15,7 @@ import pytest
 from reference_layouts import technology_of
 
 from latchscan.errors import LayoutError
-from latchscan.layout import guard
+from latchscan.layout.file import guard
 from latchscan.layout.source import open_layout
 
 PAIR = (1, 0)

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 import shapely
 
-from latchscan.layout.contacts import distinct_boxes, meets_any, merged_across, merged_boxes
+from latchscan.layout.derive.contacts import distinct_boxes, meets_any, merged_across, merged_boxes
 
 
 def scattered(rng: np.random.Generator, count: int, largest: int) -> np.ndarray:

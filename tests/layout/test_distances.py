@@ -14,9 +14,10 @@ from hypothesis import strategies as st
 from shapely import affinity
 
 from latchscan.errors import GeometryError, ResolutionError
-from latchscan.layout import convex, distances, farthest, neighbours, walls
+from latchscan.layout import distances
 from latchscan.layout.distances import measure_distances, measure_spacings
-from latchscan.layout.farthest import farthest_points
+from latchscan.layout.measure import convex, farthest, neighbours, walls
+from latchscan.layout.measure.farthest import farthest_points
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     P_IN_NWELL,

@@ -12,7 +12,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely import affinity
 
-from latchscan.layout import neighbours
+from latchscan.layout.measure import neighbours
+from latchscan.layout.measure.neighbours import nearest_few
+from latchscan.layout.measure.walls import nearest_on_walls
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
     P_IN_NWELL,
@@ -24,9 +26,7 @@ from latchscan.layout.model import (
     Regions,
     Taps,
 )
-from latchscan.layout.neighbours import nearest_few
 from latchscan.layout.pairs import NEAREST, find_pairs
-from latchscan.layout.walls import nearest_on_walls
 
 GRID_UM = 0.005
 

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 import shapely
 
-from latchscan.layout.slabs import cut_upright, upright_parts, upright_rings
+from latchscan.layout.derive.slabs import cut_upright, upright_parts, upright_rings
 
 
 def upright_union(rng: np.random.Generator, boxes: int) -> np.ndarray:

@@ -12,9 +12,9 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from reference_layouts import canonical, expected, outlines
 
-from latchscan.layout.hierarchy import parents_first, top_cells
-from latchscan.layout.reading import read_tables
-from latchscan.layout.walk import Walker
+from latchscan.layout.file.hierarchy import parents_first, top_cells
+from latchscan.layout.file.reading import read_tables
+from latchscan.layout.file.walk import Walker
 
 PAIR = (1, 0)
 coordinates = st.integers(-40, 40)

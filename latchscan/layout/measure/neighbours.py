@@ -15,7 +15,7 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from latchscan.layout.convex import is_rectangle
+from latchscan.layout.measure.convex import is_rectangle
 from latchscan.layout.model import Floats, Geometries, Ints, frozen
 
 TIE_UM = 1e-6

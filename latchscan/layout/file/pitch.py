@@ -5,10 +5,10 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from latchscan.layout.hierarchy import instance_counts
+from latchscan.layout.file.hierarchy import instance_counts
+from latchscan.layout.file.placements import all_placements
+from latchscan.layout.file.tables import Tables
 from latchscan.layout.model import Floats, Ints
-from latchscan.layout.placements import all_placements
-from latchscan.layout.tables import Tables
 
 REPEATS = 16
 """A pitch counts when the cell stands at least at so many places along each axis."""

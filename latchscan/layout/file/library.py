@@ -15,10 +15,10 @@ from collections.abc import Iterable
 from functools import lru_cache
 from pathlib import Path
 
-from latchscan.layout.hierarchy import parents_first
+from latchscan.layout.file.hierarchy import parents_first
+from latchscan.layout.file.tables import Pair, Tables, load_tables, save_tables
+from latchscan.layout.file.walk import Walker
 from latchscan.layout.model import Ints
-from latchscan.layout.tables import Pair, Tables, load_tables, save_tables
-from latchscan.layout.walk import Walker
 
 
 class Library:

@@ -2,7 +2,7 @@
 
 A piece is a row of corners in counter-clockwise order, padded by repeating its last corner,
 so that thousands of pieces are one array.  Distances to a convex piece are convex functions
-of the point; `latchscan.layout.farthest` rests on that.
+of the point; `latchscan.layout.measure.farthest` rests on that.
 """
 
 from __future__ import annotations

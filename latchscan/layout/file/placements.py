@@ -13,9 +13,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.errors import LayoutError
-from latchscan.layout.hierarchy import child_lists, turned_box
+from latchscan.layout.file.hierarchy import child_lists, turned_box
+from latchscan.layout.file.tables import Tables
 from latchscan.layout.model import Floats, Ints
-from latchscan.layout.tables import Tables
 
 LARGEST_PART = 2.0e7
 """Most instances of one cell's children that are unrolled at once."""

@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 import shapely
 
-from latchscan.layout.convex import is_rectangle
+from latchscan.layout.measure.convex import is_rectangle
 from latchscan.layout.model import Floats, Geometries
 
 TIE_UM = 1e-6

@@ -1,7 +1,7 @@
 """Open any file as a layout and survive it: unpacking, the reading child, its deaths.
 
 The parent never touches the file with a layout library.  It looks at the first bytes,
-unpacks gzip within a stated limit, starts `latchscan.layout.reading` in a process of its own
+unpacks gzip within a stated limit, starts `latchscan.layout.file.reading` in a process of its own
 and turns whatever becomes of that process into tables or one clear error.
 """
 
@@ -22,7 +22,7 @@ from pathlib import Path
 from typing import IO
 
 from latchscan.errors import LayoutError
-from latchscan.layout.tables import Pair, Tables, load_tables
+from latchscan.layout.file.tables import Pair, Tables, load_tables
 
 LARGEST_UNPACKED_BYTES = 4 << 30
 """Largest size a gzipped layout may unpack to."""
@@ -159,7 +159,7 @@ def _read_in_child(
     seconds = SECONDS_BASE + SECONDS_PER_MEGABYTE * size / 1e6
     try:
         done = subprocess.run(
-            [sys.executable, "-P", "-m", "latchscan.layout.reading", str(order)],
+            [sys.executable, "-P", "-m", "latchscan.layout.file.reading", str(order)],
             stdin=subprocess.DEVNULL,
             capture_output=True,
             env={

@@ -10,10 +10,16 @@ import numpy as np
 
 from latchscan.caveats import Caveat
 from latchscan.errors import LayoutError
-from latchscan.layout.hierarchy import cell_boxes, exact_box, polygon_boxes, reachable, top_cells
+from latchscan.layout.file.hierarchy import (
+    cell_boxes,
+    exact_box,
+    polygon_boxes,
+    reachable,
+    top_cells,
+)
+from latchscan.layout.file.outlines import LARGEST_COORDINATE
+from latchscan.layout.file.tables import Pair, Tables
 from latchscan.layout.model import Floats, Ints
-from latchscan.layout.outlines import LARGEST_COORDINATE
-from latchscan.layout.tables import Pair, Tables
 from latchscan.technology.expressions import names_in, parse_expression
 from latchscan.technology.model import Technology
 

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
-from latchscan.layout.convex import cut_convex, nearest_on_pieces
+from latchscan.layout.measure.convex import cut_convex, nearest_on_pieces
 from latchscan.layout.model import Floats, Geometries, Ints
 
 ROUNDING_UM = 1e-8

@@ -14,8 +14,8 @@ import shapely
 from numpy.typing import NDArray
 
 from latchscan.errors import LayoutError
+from latchscan.layout.file.tables import Tables
 from latchscan.layout.model import Floats, Ints
-from latchscan.layout.tables import Tables
 
 Flags = NDArray[np.bool_]
 

@@ -11,9 +11,9 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from latchscan.layout.contacts import NO_BOXES, meets_any
-from latchscan.layout.derivation import MITRE_LIMIT, TAPS, Program, Step
-from latchscan.layout.geometry import (
+from latchscan.layout.derive.contacts import NO_BOXES, meets_any
+from latchscan.layout.derive.derivation import MITRE_LIMIT, TAPS, Program, Step
+from latchscan.layout.derive.geometry import (
     SUBGRID,
     Drawn,
     both,
@@ -26,9 +26,9 @@ from latchscan.layout.geometry import (
     wide_parts,
     without,
 )
+from latchscan.layout.derive.slabs import cut_upright, upright_rings
+from latchscan.layout.derive.stitching import Rings, join_rings, select_rings
 from latchscan.layout.model import Ints
-from latchscan.layout.slabs import cut_upright, upright_rings
-from latchscan.layout.stitching import Rings, join_rings, select_rings
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

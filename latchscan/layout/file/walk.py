@@ -14,11 +14,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from latchscan.layout.hierarchy import cell_boxes, polygon_boxes, turned_box
-from latchscan.layout.lookup import BoxLookup, boxes_meet
-from latchscan.layout.model import Floats, Ints
-from latchscan.layout.outlines import offsets, vertex_rows
-from latchscan.layout.placements import (
+from latchscan.layout.file.hierarchy import cell_boxes, polygon_boxes, turned_box
+from latchscan.layout.file.lookup import BoxLookup, boxes_meet
+from latchscan.layout.file.outlines import offsets, vertex_rows
+from latchscan.layout.file.placements import (
     Placements,
     array_inverses,
     array_ranges,
@@ -28,7 +27,8 @@ from latchscan.layout.placements import (
     turned,
     unrolled,
 )
-from latchscan.layout.tables import Pair, Tables
+from latchscan.layout.file.tables import Pair, Tables
+from latchscan.layout.model import Floats, Ints
 
 MARGIN = 1.0
 """Rounding moves a vertex by at most half a database unit; boxes are widened by this."""

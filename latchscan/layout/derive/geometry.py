@@ -14,8 +14,8 @@ import gdstk
 import numpy as np
 import shapely
 
+from latchscan.layout.derive.stitching import Rings, select_rings, signed_areas
 from latchscan.layout.model import Floats, Geometries, Ints, frozen
-from latchscan.layout.stitching import Rings, select_rings, signed_areas
 
 SUBGRID = 16
 """Grid steps in one database unit."""

@@ -24,7 +24,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.errors import ResolutionError
-from latchscan.layout.convex import (
+from latchscan.layout.measure.convex import (
     Pieces,
     add_crossings,
     box_corners,
@@ -32,9 +32,9 @@ from latchscan.layout.convex import (
     nearest_on_pieces,
     upper_part,
 )
-from latchscan.layout.crowds import cut_crowds
+from latchscan.layout.measure.crowds import cut_crowds
+from latchscan.layout.measure.targets import Targets, place_pieces, place_targets
 from latchscan.layout.model import Floats, Geometries, Ints, frozen
-from latchscan.layout.targets import Targets, place_pieces, place_targets
 
 RESOLUTION_UM = 5e-9
 """A piece is decided when its largest distance is known this well [um]."""

@@ -16,15 +16,20 @@ from itertools import pairwise
 
 import numpy as np
 
-from latchscan.layout.contacts import NO_BOXES, distinct_boxes, meets_any, merged_boxes
-from latchscan.layout.derivation import Program
-from latchscan.layout.evaluation import WindowResult, evaluate
-from latchscan.layout.geometry import SUBGRID, bounding_boxes, draw_rings, merged, to_rings
-from latchscan.layout.model import Ints
-from latchscan.layout.slabs import within_runs
-from latchscan.layout.source import LayoutSource, PolygonColumns
-from latchscan.layout.stitching import Rings, join_rings, no_rings, pick_rings, select_rings, stitch
-from latchscan.layout.windows import (
+from latchscan.layout.derive.contacts import NO_BOXES, distinct_boxes, meets_any, merged_boxes
+from latchscan.layout.derive.derivation import Program
+from latchscan.layout.derive.evaluation import WindowResult, evaluate
+from latchscan.layout.derive.geometry import SUBGRID, bounding_boxes, draw_rings, merged, to_rings
+from latchscan.layout.derive.slabs import within_runs
+from latchscan.layout.derive.stitching import (
+    Rings,
+    join_rings,
+    no_rings,
+    pick_rings,
+    select_rings,
+    stitch,
+)
+from latchscan.layout.derive.windows import (
     BoxDbu,
     Grid,
     SortedShapes,
@@ -32,6 +37,8 @@ from latchscan.layout.windows import (
     sort_layers,
     window_key,
 )
+from latchscan.layout.model import Ints
+from latchscan.layout.source import LayoutSource, PolygonColumns
 
 Pair = tuple[int, int]
 

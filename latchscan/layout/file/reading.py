@@ -1,7 +1,7 @@
 """The guarded reading child: a GDSII or OASIS file in, `Tables` in a file out.
 
 gdstk can die by a signal on a damaged file, so it runs only here, in a process of its own:
-``python -m latchscan.layout.reading JOB`` where JOB is a JSON file (see `main`).  Exit status
+``python -m latchscan.layout.file.reading JOB`` where JOB is a JSON file (see `main`).  Exit status
 0 means the tables were written; 3 that the file was understood to be bad, with one line on
 standard output; 4 that the tables could not be written; anything else that the process was
 lost.
@@ -21,9 +21,9 @@ from typing import Any
 import gdstk
 import numpy as np
 
+from latchscan.layout.file.outlines import OutlineColumns, check_range, whole
+from latchscan.layout.file.tables import Pair, Tables, save_tables
 from latchscan.layout.model import Floats
-from latchscan.layout.outlines import OutlineColumns, check_range, whole
-from latchscan.layout.tables import Pair, Tables, save_tables
 
 if sys.platform != "win32":
     import resource

@@ -13,11 +13,11 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import NDArray
 
-from latchscan.layout.derivation import Program
-from latchscan.layout.evaluation import DrawnLayer, Window
-from latchscan.layout.geometry import both, bounding_boxes, draw_boxes, draw_rings, to_rings
+from latchscan.layout.derive.derivation import Program
+from latchscan.layout.derive.evaluation import DrawnLayer, Window
+from latchscan.layout.derive.geometry import both, bounding_boxes, draw_boxes, draw_rings, to_rings
+from latchscan.layout.derive.stitching import Rings, join_rings, no_rings, select_rings
 from latchscan.layout.model import Ints
-from latchscan.layout.stitching import Rings, join_rings, no_rings, select_rings
 
 BoxDbu = tuple[int, int, int, int]
 

@@ -1,0 +1,1 @@
+"""Booleans: the technology's expressions in windows, stitched to whole regions."""

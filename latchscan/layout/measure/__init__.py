@@ -1,0 +1,1 @@
+"""Measuring: farthest points, nearest neighbours, walls."""
