@@ -105,7 +105,8 @@ def main(folder: Path) -> None:
     print(f"--help: {seconds:.2f} s", flush=True)
     growth = {}
     for name, layout in layouts.items():
-        seconds, peak = median_process(scan_command(layout, folder / f"out_{name}"))
+        runs = 1 if name == "cells_10000" else RUNS
+        seconds, peak = median_process(scan_command(layout, folder / f"out_{name}"), runs)
         growth[name] = seconds
         print(f"scan {name}: {seconds:.1f} s, {peak:.0f} MB", flush=True)
     exponent = math.log(growth["cells_10000"] / growth["cells_1000"]) / math.log(10)
