@@ -63,6 +63,10 @@ class DrawnBlock:
     def labels(self, pairs: Iterable[tuple[int, int]]) -> tuple[Label, ...]:
         return self.texts
 
+    def total_polygons(self, pairs: Iterable[tuple[int, int]]) -> int:
+        names = {pair: name for name, pair in LAYERS.items()}
+        return sum(len(self.shapes.get(names.get(pair, ""), ())) for pair in pairs)
+
     def repeat_pitch_dbu(self) -> tuple[int, int] | None:
         return self.pitch_dbu
 

@@ -125,7 +125,7 @@ def solve_network(network: Network, right: csc_matrix) -> Floats:
     for rows in _row_blocks(cells):
         answer[rows] -= shift[rows] @ contacts
     answer[cells:] = contacts
-    return answer
+    return np.asarray(answer, dtype=np.float64)
 
 
 def elimination_order(network: Network, right: csc_matrix) -> Ints:

@@ -8,7 +8,7 @@ depend on the sizes of tiles and windows, nor on the number of workers.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from itertools import pairwise
 
@@ -45,6 +45,8 @@ LARGEST_BLOCK_DBU = 2**30 // SUBGRID
 LARGEST_PITCH_UM = 50.0
 """Windows that follow a coarser pitch would hold too much to be seen twice."""
 MOST_TILES_A_TASK = 4
+MOST_POLYGONS = 100_000_000
+"""Polygons after expansion, contacts not counted: about an hour of work."""
 FEW_TASKS = 6
 """A process that gets a task must first open the layout: few tasks, but enough to share."""
 
@@ -99,6 +101,9 @@ def derive_regions(
     program = compile_program(technology)
     block = _analysed_box(source, window_um)
     layers = _used_layers(program, technology)
+    if window_um is None:
+        names = {*program.layers(wide=False), *program.layers(wide=True)}
+        _require_bearable(source, [layers[name] for name in sorted(names)])
     tasks = _tasks(source, program, layers, block, sizes or Sizes())
     batches = workers.map("regions", derive_tiles, tasks)
     results = [result for batch in batches for result in batch]
@@ -137,6 +142,17 @@ def _pair(text: str) -> Pair:
 def _to_um(box: BoxDbu, unit_um: float) -> Box:
     x0, y0, x1, y1 = (value * unit_um for value in box)
     return (x0, y0, x1, y1)
+
+
+def _require_bearable(source: LayoutSource, layers: Iterable[tuple[Pair, ...]]) -> None:
+    """Refuse what could not be worked off before any work is done."""
+    count = source.total_polygons([pair for pairs in layers for pair in pairs])
+    if count > MOST_POLYGONS:
+        raise LayoutError(
+            f"{source.name}: cell {source.top} holds {count} polygons on the layers of its"
+            f" regions; expected at most {MOST_POLYGONS}",
+            hint="scan it in parts with --window",
+        )
 
 
 def _analysed_box(source: LayoutSource, window_um: Box | None) -> BoxDbu:

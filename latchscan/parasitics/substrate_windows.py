@@ -164,7 +164,6 @@ class SubstrateScene:
     emitters: Shapes
     boxes_um: Floats
     taps: Shapes
-    tap_boxes_um: Floats
     series_ohm: Floats
     sheet: Floats
     holes: Floats
@@ -192,7 +191,6 @@ def substrate_scene(layout: Layout, contact_ohm: float, *, with_sheet: bool) -> 
         emitters=shapes_of(emitters.polygons[mine]),
         boxes_um=emitters.box_um[mine],
         taps=shapes_of(polygons),
-        tap_boxes_um=shapely.bounds(polygons).reshape(-1, 4),
         series_ohm=contact_ohm / taps.contact_count[tied],
         sheet=rectangle_pieces(_column(shells))[0],
         holes=rectangle_pieces(_column(holes))[0],

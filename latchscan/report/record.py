@@ -15,7 +15,8 @@ import numpy as np
 import shapely
 
 from latchscan import __version__
-from latchscan.layout.model import REGION_NAMES, Floats, Ints, Layout
+from latchscan.layout.model import Floats, Ints, Layout
+from latchscan.layout.regions import region_statistics
 from latchscan.report.plain import plain_text, significant
 from latchscan.rules.model import Evidence, Finding
 from latchscan.scan import Scan
@@ -88,11 +89,8 @@ def _box(box_um: Iterable[float]) -> list[float | None]:
 def _regions(layout: Layout) -> Record:
     """Count and area of each region that reports list."""
     return {
-        name: {
-            "count": len(layout.regions.shapes[name]),
-            "area_um2": _drawn(float(np.sum(shapely.area(layout.regions.shapes[name])))),
-        }
-        for name in REGION_NAMES
+        name: {"count": one.count, "area_um2": _drawn(one.area_um2)}
+        for name, one in region_statistics(layout.regions).items()
     }
 
 

@@ -74,8 +74,9 @@ def describe(evidence: Evidence, breaks: Breaks, row: int, count: int) -> str:
             f"The spacing of {own} injector {breaks.subject[row]} ({name}) at {at} could not be"
             f" measured{others}; inspect it by hand."
         )
+    other_at = place(*evidence.spacings.to_um[breaks.member[row]])
     return (
         f"The {own} injector {breaks.subject[row]} ({name}) at {at} is"
-        f" {breaks.measured[row]:.3f} um from {target}{others}, less than the limit of"
-        f" {breaks.limit[row]:g} um; move them apart or guard the injector with rings."
+        f" {breaks.measured[row]:.3f} um from {target} at {other_at}{others}, less than the"
+        f" limit of {breaks.limit[row]:g} um; move them apart or guard the injector with rings."
     )

@@ -80,9 +80,10 @@ def describe(evidence: Evidence, breaks: Breaks, row: int, count: int) -> str:
             f"The tap distance of {diffusion} emitter {breaks.subject[row]} in {body.id} at {at}"
             f" could not be measured{others}; inspect its taps by hand."
         )
+    tap_at = place(*evidence.distances.nearest_tap_um[member])
     return (
         f"The {diffusion} emitter {breaks.subject[row]} reaches {breaks.measured[row]:.3f} um"
-        f" from the nearest tap of {body.id} at {at}{others}, more than the limit of"
+        f" from the nearest tap of {body.id}, from {tap_at} to {at}{others}, more than the limit of"
         f" {breaks.limit[row]:g} um; add a contacted {tap} within {breaks.limit[row]:g} um of"
         " that place."
     )
