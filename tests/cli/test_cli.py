@@ -289,8 +289,10 @@ def test_a_stopped_scan_says_so_once_and_leaves_the_old_files(
 ) -> None:
     (tmp_path / "scan.json").write_text("old", encoding="utf-8")
     code = (
-        "import sys, time, latchscan.scan, latchscan.layout.source\n"
+        "import signal, sys, time, latchscan.scan, latchscan.layout.source\n"
         "from latchscan.cli import run\n"
+        # a shell that runs the tests in the background has them ignore the keyboard
+        "signal.signal(signal.SIGINT, signal.default_int_handler)\n"
         "def scan(source, loaded, options, workers):\n"
         "    workers.map('start', time.sleep, [0.01] * 4)\n"
         "    print('ready', flush=True)\n"
