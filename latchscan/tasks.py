@@ -16,6 +16,7 @@ from concurrent.futures import Executor, ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from functools import partial
 from multiprocessing.connection import wait
 from typing import Protocol, TypeVar
 
@@ -84,6 +85,23 @@ class Workers:
                 hint="often for want of memory: give a --window or fewer --jobs",
             ) from None
         return results
+
+    def attempt(
+        self, stage: str, function: Callable[[Item], Result], items: Sequence[Item]
+    ) -> list[Result | None]:
+        """Like `map`, but None for an item of which `function` makes an `AnalysisError`.
+
+        One item without a trustworthy answer is no reason to give up the others; the caller
+        leaves its rows open, which no rule takes for passed.
+        """
+        return self.map(stage, partial(_result_or_none, function), items)
+
+
+def _result_or_none(function: Callable[[Item], Result], item: Item) -> Result | None:
+    try:
+        return function(item)
+    except AnalysisError:
+        return None
 
 
 @contextmanager

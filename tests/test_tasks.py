@@ -21,6 +21,20 @@ def test_results_come_in_the_order_of_the_items() -> None:
         assert workers.map("squares", abs, list(range(-9, 0))) == list(range(9, 0, -1))
 
 
+@pytest.mark.parametrize("jobs", [1, 2])
+def test_an_attempt_leaves_out_what_has_no_answer(jobs: int) -> None:
+    with open_workers(jobs, Silent()) as workers:
+        assert workers.attempt("roots", _root, [4.0, -1.0, 9.0]) == [2.0, None, 3.0]
+        with pytest.raises(AnalysisError, match="no root"):
+            workers.map("roots", _root, [4.0, -1.0, 9.0])
+
+
+def _root(square: float) -> float:
+    if square < 0:
+        raise AnalysisError("no root")
+    return square**0.5
+
+
 def test_a_lost_worker_is_one_clear_error_and_nobody_waits_for_the_others() -> None:
     begin = time.monotonic()
     with (

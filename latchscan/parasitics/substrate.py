@@ -11,7 +11,6 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from latchscan.errors import AnalysisError
 from latchscan.fields.layered import LayeredKernel, Stack, tabulate_kernel
 from latchscan.layout.model import Floats, Layout, Pairs, frozen
 from latchscan.parasitics.material import pwell_temperature_factor
@@ -94,7 +93,7 @@ def solve_substrate(
             )
             for window in windows
         ]
-        results = workers.map("substrate", _solve_or_none, tasks)
+        results = workers.attempt("substrate", _solve, tasks)
         narrow = []
         for window, solved in zip(windows, results, strict=True):
             if solved is not None:
@@ -121,14 +120,6 @@ def substrate_stack(technology: Technology, factor: float) -> Stack:
         thickness_um=tuple(layer.thickness_um.typical for layer in substrate.layers),
         bottom_contacted=substrate.back_side == "contacted",
     )
-
-
-def _solve_or_none(task: _Task) -> WindowFields | None:
-    """Fields of a window; None where no solution can be trusted."""
-    try:
-        return _solve(task)
-    except AnalysisError:
-        return None
 
 
 def _solve(task: _Task) -> WindowFields:

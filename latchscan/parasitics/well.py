@@ -32,7 +32,7 @@ from latchscan.layout.model import (
 from latchscan.parasitics.clusters import cluster_emitters
 from latchscan.parasitics.material import pwell_temperature_factor, sheet_temperature_factor
 from latchscan.parasitics.model import BodyFields, Resistances, Transfers
-from latchscan.parasitics.well_windows import WellWindow, WindowResult, solve_or_none
+from latchscan.parasitics.well_windows import WellWindow, WindowResult, solve_window
 from latchscan.tasks import Workers
 from latchscan.technology.model import Technology
 
@@ -255,7 +255,7 @@ def _run(
         digests = [window.digest() for window in windows]
         number = {digest: k for k, digest in enumerate(dict.fromkeys(digests))}
         unique = dict(zip(digests, windows, strict=True))
-        solved = workers.map("wells", solve_or_none, [unique[digest] for digest in number])
+        solved = workers.attempt("wells", solve_window, [unique[digest] for digest in number])
         again = []
         for job, window, digest in zip(jobs, windows, digests, strict=True):
             result = solved[number[digest]]

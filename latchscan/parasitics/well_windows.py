@@ -118,20 +118,8 @@ class WindowResult:
     point_ohm: Floats
 
 
-def solve_or_none(window: WellWindow) -> WindowResult | None:
-    """Solve one window (runs in any process); None where no solution can be trusted.
-
-    One window that fails is no reason to give up the others: its rows stay unsolved, which
-    the result says and no rule takes for passed.
-    """
-    try:
-        return solve_window(window)
-    except AnalysisError:
-        return None
-
-
 def solve_window(window: WellWindow) -> WindowResult:
-    """Solve one window.
+    """Solve one window (runs in any process).
 
     Raises
     ------

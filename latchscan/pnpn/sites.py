@@ -26,7 +26,6 @@ then pair index.
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -85,6 +84,40 @@ class _Gains:
     loop_gain: Floats
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Table:
+    """All columns (m,) of the sites in the pairs' order, and their ranking."""
+
+    ends: _Ends
+    gains: _Gains
+    patch: NDArray[np.bool_]
+    substrate_a: Floats
+    well_a: Floats
+    order: Ints
+
+    def spread(self, rows: Ints, count: int) -> _Table:
+        """Put the columns into `rows` of `count`; the other rows have no numbers."""
+
+        def spread(column: Floats) -> Floats:
+            wide = np.full(count, np.nan)
+            wide[rows] = column
+            return wide
+
+        def spread_all(part: _Ends | _Gains) -> dict[str, Floats]:
+            return {one.name: spread(getattr(part, one.name)) for one in fields(part)}
+
+        patch = np.zeros(count, dtype=np.bool_)
+        patch[rows] = self.patch
+        return _Table(
+            ends=_Ends(**spread_all(self.ends)),
+            gains=_Gains(**spread_all(self.gains)),
+            patch=patch,
+            substrate_a=spread(self.substrate_a),
+            well_a=spread(self.well_a),
+            order=rows[self.order],
+        )
+
+
 def evaluate_sites(
     layout: Layout,
     pairs: Pairs,
@@ -121,8 +154,10 @@ def evaluate_sites(
     rows = np.flatnonzero(known)
     some = Pairs(**{f.name: getattr(pairs, f.name)[rows] for f in fields(pairs)})
     taken = Transfers(**{f.name: getattr(transfers, f.name)[rows] for f in fields(transfers)})
-    sites = _evaluated(layout, some, resistances, taken, technology, temperature_k)
-    return _with_unsolved(layout, pairs, sites, rows, np.flatnonzero(~known))
+    table = _evaluated(layout, some, resistances, taken, technology, temperature_k)
+    whole = table.spread(rows, len(known))
+    order = np.concatenate([whole.order, np.flatnonzero(~known)])
+    return _ranked(layout, pairs, whole, order)
 
 
 def _solved(pairs: Pairs, resistances: Resistances, transfers: Transfers) -> NDArray[np.bool_]:
@@ -137,28 +172,6 @@ def _solved(pairs: Pairs, resistances: Resistances, transfers: Transfers) -> NDA
     return good
 
 
-def _with_unsolved(
-    layout: Layout, pairs: Pairs, sites: Sites, solved: Ints, unsolved: Ints
-) -> Sites:
-    """All sites: the evaluated ones, renumbered to the whole list, then the others as NaN."""
-    order = np.concatenate([solved[sites.pair], unsolved])
-    place = pair_places_um(layout, pairs)[order]
-    columns: dict[str, NDArray[Any]] = {}
-    for column in fields(sites):
-        values = getattr(sites, column.name)
-        if values.dtype.kind not in "fb":
-            continue
-        empty = np.full(len(unsolved), False if values.dtype == np.bool_ else np.nan)
-        columns[column.name] = np.concatenate([values, empty.astype(values.dtype)])
-    columns |= {
-        "ids": np.array([f"site-{rank + 1}" for rank in range(order.size)], dtype=np.str_),
-        "pair": order,
-        "x_um": place[:, 0].copy(),
-        "y_um": place[:, 1].copy(),
-    }
-    return Sites(**{name: frozen(values) for name, values in columns.items()})
-
-
 def _evaluated(
     layout: Layout,
     pairs: Pairs,
@@ -166,8 +179,8 @@ def _evaluated(
     transfers: Transfers,
     technology: Technology,
     temperature_k: float,
-) -> Sites:
-    """Sites of pairs that all have their resistances."""
+) -> _Table:
+    """Evaluate pairs that all have their resistances."""
     sources = collect_sources(layout, technology.loop.patch_radius_um)
     views = (
         _single_ends(pairs, resistances, transfers, sources),
@@ -183,7 +196,9 @@ def _evaluated(
     gains = _Gains(**_chosen(patch, joint, single))
     circuit = _circuit(ends, betas, technology, temperature_k)
     substrate, well, order = _triggers(circuit, gains)
-    return _ranked(layout, pairs, ends, gains, patch, substrate, well, order)
+    return _Table(
+        ends=ends, gains=gains, patch=patch, substrate_a=substrate, well_a=well, order=order
+    )
 
 
 def _single_ends(
@@ -357,17 +372,9 @@ def _rows(circuit: LoopCircuit, rows: Ints) -> LoopCircuit:
     )
 
 
-def _ranked(
-    layout: Layout,
-    pairs: Pairs,
-    ends: _Ends,
-    gains: _Gains,
-    patch: NDArray[np.bool_],
-    substrate: Floats,
-    well: Floats,
-    order: Ints,
-) -> Sites:
+def _ranked(layout: Layout, pairs: Pairs, table: _Table, order: Ints) -> Sites:
     place = pair_places_um(layout, pairs)[order]
+    ends, gains = table.ends, table.gains
 
     def ranked(column: Floats) -> Floats:
         return frozen(column[order])
@@ -385,8 +392,8 @@ def _ranked(
         beta_npn=ranked(gains.beta_npn),
         loop_gain_ceiling=ranked(gains.ceiling),
         loop_gain=ranked(gains.loop_gain),
-        trigger_current_a=ranked(np.fmin(substrate, well)),
-        trigger_well_a=ranked(well),
-        trigger_substrate_a=ranked(substrate),
-        patch=frozen(patch[order]),
+        trigger_current_a=ranked(np.fmin(table.substrate_a, table.well_a)),
+        trigger_well_a=ranked(table.well_a),
+        trigger_substrate_a=ranked(table.substrate_a),
+        patch=frozen(table.patch[order]),
     )

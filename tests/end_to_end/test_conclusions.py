@@ -13,7 +13,7 @@ from layouts import rows_block
 
 from latchscan.cli import run
 from latchscan.errors import ConvergenceError
-from latchscan.parasitics import substrate, well_windows
+from latchscan.parasitics import substrate, well
 
 
 def scanned(layout: Path, out: Path, *options: str) -> int:
@@ -38,7 +38,7 @@ def test_a_window_without_solution_never_passes(
         raise ConvergenceError("no solution")
 
     if part == "wells":
-        monkeypatch.setattr(well_windows, "solve_window", fail)
+        monkeypatch.setattr(well, "solve_window", fail)
     else:
         monkeypatch.setattr(substrate, "_solve", fail)
     layout = rows_block(3).write(tmp_path / "block.gds")

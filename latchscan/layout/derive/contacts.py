@@ -10,8 +10,8 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from latchscan.layout.derive.slabs import within_runs
 from latchscan.layout.model import Ints
+from latchscan.layout.runs import within_runs
 
 EVEN = 4
 """Boxes are alike if the longest side is no more than so many times the usual one."""

@@ -16,6 +16,7 @@ import shapely
 from numpy.typing import NDArray
 
 from latchscan.layout.model import Floats, Geometries, Ints
+from latchscan.layout.runs import successors, within_runs
 
 Number = TypeVar("Number", np.int64, np.float64)
 
@@ -32,7 +33,7 @@ def upright_rings(points: NDArray[Number], first: Ints) -> NDArray[np.bool_]:
     """
     if len(first) < 2:
         return np.zeros(0, dtype=np.bool_)
-    straight = (points[_successors(first)] == points).any(axis=1)
+    straight = (points[successors(first)] == points).any(axis=1)
     return np.asarray(np.logical_and.reduceat(straight, first[:-1]))
 
 
@@ -55,7 +56,7 @@ def cut_upright(points: NDArray[Number], first: Ints, owner: Ints) -> tuple[NDAr
     owner
         (m,) the polygon of each.
     """
-    following = points[_successors(first)]
+    following = points[successors(first)]
     upright = np.flatnonzero(points[:, 1] != following[:, 1])
     ends = np.stack([points[upright, 1], following[upright, 1]])
     polygon = np.repeat(owner, np.diff(first))[upright]
@@ -112,15 +113,3 @@ def ranked_levels(owner: Ints, y: NDArray[Number]) -> tuple[Ints, NDArray[Number
     rank = np.empty(len(order), dtype=np.int64)
     rank[order] = np.cumsum(fresh) - 1
     return sorted_owner[fresh], sorted_y[fresh], rank
-
-
-def _successors(first: Ints) -> Ints:
-    """(n,) index of every point's successor in its ring."""
-    following = np.arange(1, int(first[-1]) + 1)
-    following[first[1:] - 1] = first[:-1]
-    return following
-
-
-def within_runs(count: Ints) -> Ints:
-    """0, 1, ... in runs of the given lengths."""
-    return np.arange(int(count.sum())) - np.repeat(np.cumsum(count) - count, count)

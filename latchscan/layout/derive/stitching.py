@@ -20,6 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.layout.model import Ints
+from latchscan.layout.runs import offsets, successors, within_runs
 
 NEAR_LINE = 1.0
 """A corner between two slanted edges that lies closer to the line through its neighbours
@@ -70,15 +71,15 @@ def select_rings(rings: Rings, chosen: NDArray[np.bool_]) -> Rings:
     sizes = np.diff(rings.first)
     return Rings(
         points=rings.points[np.repeat(chosen, sizes)],
-        first=_offsets(sizes[chosen]),
+        first=offsets(sizes[chosen]),
     )
 
 
 def pick_rings(rings: Rings, order: Ints) -> Rings:
     """The rings with the indices `order`, in that order; an index may come again."""
     sizes = np.diff(rings.first)[order]
-    first = _offsets(sizes)
-    inside = np.arange(first[-1]) - np.repeat(first[:-1], sizes)
+    first = offsets(sizes)
+    inside = within_runs(sizes)
     return Rings(points=rings.points[np.repeat(rings.first[order], sizes) + inside], first=first)
 
 
@@ -131,22 +132,11 @@ def signed_areas(rings: Rings) -> NDArray[np.float64]:
     """Area of every ring, positive counter-clockwise [grid steps squared]."""
     if not rings.count:
         return np.zeros(0)
-    following = rings.points[_next_index(rings.first)]
+    following = rings.points[successors(rings.first)]
     # about each ring's first point, so that products stay small
     origin = np.repeat(rings.points[rings.first[:-1]], np.diff(rings.first), axis=0)
     (x0, y0), (x1, y1) = (rings.points - origin).T, (following - origin).T
     return np.add.reduceat(x0 * y1 - x1 * y0, rings.first[:-1]) / 2.0
-
-
-def _offsets(sizes: Ints) -> Ints:
-    return np.concatenate([[0], np.cumsum(sizes)]).astype(np.int64)
-
-
-def _next_index(first: Ints) -> Ints:
-    """(n,) index of every point's successor in its ring."""
-    following = np.arange(1, first[-1] + 1)
-    following[first[1:] - 1] = first[:-1]
-    return following
 
 
 def _previous_index(first: Ints) -> Ints:
@@ -159,7 +149,7 @@ def _remaining_edges(rings: Rings) -> Ints:
     """(m, 4) edges x0, y0, x1, y1 that are left when opposite ones have cancelled."""
     if not rings.count:
         return np.zeros((0, 4), dtype=np.int64)
-    edges = np.hstack([rings.points, rings.points[_next_index(rings.first)]])
+    edges = np.hstack([rings.points, rings.points[successors(rings.first)]])
     flat, upright = edges[:, 1] == edges[:, 3], edges[:, 0] == edges[:, 2]
     across = _cancel(edges[flat & ~upright])
     along = _cancel(edges[upright & ~flat][:, [1, 0, 3, 2]])[:, [1, 0, 3, 2]]
@@ -213,7 +203,7 @@ def _chain(edges: Ints) -> Rings:
     busy = np.bincount(start)[end] > 1
     _turn_at_shared(edges, following, np.flatnonzero(busy), start, end)
     chosen, sizes = _walk(following, start, busy)
-    return Rings(points=edges[chosen, :2], first=_offsets(sizes))
+    return Rings(points=edges[chosen, :2], first=offsets(sizes))
 
 
 def _turn_at_shared(edges: Ints, following: Ints, busy: Ints, start: Ints, end: Ints) -> None:
@@ -292,7 +282,7 @@ def _split(ring: list[int], origin: list[int]) -> list[list[int]]:
 def _without_straight_points(rings: Rings) -> Rings:
     while rings.count:
         before = rings.points - rings.points[_previous_index(rings.first)]
-        after = rings.points[_next_index(rings.first)] - rings.points
+        after = rings.points[successors(rings.first)] - rings.points
         cross = before[:, 0] * after[:, 1] - before[:, 1] * after[:, 0]
         straight = cross == 0
         slanted = np.all(before != 0, axis=1) & np.all(after != 0, axis=1) & ~straight
@@ -310,4 +300,4 @@ def _drop_points(rings: Rings, dropped: NDArray[np.bool_]) -> Rings:
     kept = np.add.reduceat(~dropped, rings.first[:-1], dtype=np.int64)
     alive = kept > 2
     owner_alive = np.repeat(alive, np.diff(rings.first))
-    return Rings(points=rings.points[~dropped & owner_alive], first=_offsets(kept[alive]))
+    return Rings(points=rings.points[~dropped & owner_alive], first=offsets(kept[alive]))

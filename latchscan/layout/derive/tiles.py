@@ -20,7 +20,6 @@ from latchscan.layout.derive.contacts import NO_BOXES, distinct_boxes, meets_any
 from latchscan.layout.derive.derivation import Program
 from latchscan.layout.derive.evaluation import WindowResult, evaluate
 from latchscan.layout.derive.geometry import SUBGRID, bounding_boxes, draw_rings, merged, to_rings
-from latchscan.layout.derive.slabs import within_runs
 from latchscan.layout.derive.stitching import (
     Rings,
     join_rings,
@@ -38,6 +37,7 @@ from latchscan.layout.derive.windows import (
     window_key,
 )
 from latchscan.layout.model import Ints
+from latchscan.layout.runs import within_runs
 from latchscan.layout.source import LayoutSource, PolygonColumns
 
 Pair = tuple[int, int]

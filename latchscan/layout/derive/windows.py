@@ -18,6 +18,7 @@ from latchscan.layout.derive.evaluation import DrawnLayer, Window
 from latchscan.layout.derive.geometry import both, bounding_boxes, draw_boxes, draw_rings, to_rings
 from latchscan.layout.derive.stitching import Rings, join_rings, no_rings, select_rings
 from latchscan.layout.model import Ints
+from latchscan.layout.runs import within_runs
 
 BoxDbu = tuple[int, int, int, int]
 
@@ -148,7 +149,7 @@ def _windows_of(boxes: Ints, grid: Grid, margin: int) -> tuple[Ints, Ints]:
     span = np.maximum(high - low + 1, 0)
     total = span[:, 0] * span[:, 1]
     row = np.repeat(np.arange(len(boxes)), total)
-    place = np.arange(len(row)) - np.repeat(np.cumsum(total) - total, total)
+    place = within_runs(total)
     iy, ix = np.divmod(place, span[row, 0])
     return row, (low[row, 1] + iy) * grid.counts[0] + low[row, 0] + ix
 

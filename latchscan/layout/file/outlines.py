@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from latchscan.layout.model import Floats, Ints
+from latchscan.layout.runs import offsets
 
 LARGEST_COORDINATE = 2.0**51
 """Largest coordinate that is taken [database units]: sums of two stay exact in float64."""
@@ -55,11 +56,6 @@ class OutlineColumns:
         order = np.lexsort((keys[:, 1], keys[:, 0]))
         source, lengths = vertex_rows(first, order, np.zeros(len(order), dtype=np.bool_))
         return points[source], offsets(lengths), keys[order, 0], keys[order, 1]
-
-
-def offsets(lengths: Ints) -> Ints:
-    """(n + 1,) offsets of runs of the given lengths."""
-    return np.concatenate([np.zeros(1, np.int64), np.cumsum(lengths, dtype=np.int64)])
 
 
 def vertex_rows(first: Ints, rows: Ints, backwards: NDArray[np.bool_]) -> tuple[Ints, Ints]:

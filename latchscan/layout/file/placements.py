@@ -16,6 +16,7 @@ from latchscan.errors import LayoutError
 from latchscan.layout.file.hierarchy import child_lists, turned_box
 from latchscan.layout.file.tables import Tables
 from latchscan.layout.model import Floats, Ints
+from latchscan.layout.runs import within_runs
 
 LARGEST_PART = 2.0e7
 """Most instances of one cell's children that are unrolled at once."""
@@ -107,7 +108,7 @@ def unrolled(
             f" stand more than {LARGEST_PART:.0e} times in one window"
         )
     source = np.repeat(np.arange(len(row)), total)
-    within = np.arange(len(source)) - np.repeat(np.cumsum(total) - total, total)
+    within = within_runs(total)
     line_count = count[source, 1]
     column = low[source, 0] + within // line_count
     line = low[source, 1] + within % line_count

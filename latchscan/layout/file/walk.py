@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from latchscan.layout.file.hierarchy import cell_boxes, polygon_boxes, turned_box
 from latchscan.layout.file.lookup import BoxLookup, boxes_meet
-from latchscan.layout.file.outlines import offsets, vertex_rows
+from latchscan.layout.file.outlines import vertex_rows
 from latchscan.layout.file.placements import (
     Placements,
     array_inverses,
@@ -29,6 +29,7 @@ from latchscan.layout.file.placements import (
 )
 from latchscan.layout.file.tables import Pair, Tables
 from latchscan.layout.model import Floats, Ints
+from latchscan.layout.runs import offsets
 
 MARGIN = 1.0
 """Rounding moves a vertex by at most half a database unit; boxes are widened by this."""
@@ -67,7 +68,6 @@ class Walker:
         chosen = wanted[tables.polygon_pair]
         boxes = polygon_boxes(tables)
         cells, references = cell_boxes(tables, order, boxes, chosen)
-        self.cell_box = cells
         self._polygons = BoxLookup(np.flatnonzero(chosen), tables.polygon_cell, boxes, spatial=True)
         live = np.flatnonzero(references[:, 0] <= references[:, 2])
         self._references = BoxLookup(live, tables.reference_parent, references, spatial=False)

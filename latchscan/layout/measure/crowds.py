@@ -11,9 +11,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from latchscan.layout.derive.slabs import ranked_levels, upright_parts, within_runs
+from latchscan.layout.derive.slabs import ranked_levels, upright_parts
 from latchscan.layout.measure.convex import Pieces, box_corners, cut_convex
 from latchscan.layout.model import Floats, Geometries, Ints
+from latchscan.layout.runs import within_runs
 
 CROWD = 4
 """Targets in a rectangle from which on it is worth cutting."""
