@@ -54,6 +54,25 @@ SENTENCES: dict[str, str] = {
     "resistance-error": "Some resistances have an error estimate above 5 percent",
     "unsolved": "Some emitters have no trustworthy resistance and count as not passed",
     "substrate-window": "Substrate current beyond the solved window is neglected",
-    "no-injectors": "No injector is declared by a marker layer or a pin label",
+    "no-injectors": "No injector is declared by a marker layer or reached from a pin",
     "window": "Only a window of the layout was scanned; bodies are cut at its edge",
+    "no-conductors": (
+        "The technology names no conductors; no shape is followed beyond its own layer, and"
+        " nets, ties and rings are not judged"
+    ),
+    "no-supplies": "No net is known as a supply or a ground; ties of bodies are not judged",
+    "assumed-supply": "Supplies and grounds were taken from their names, their voltage assumed",
+    "assumed-pins": "Every other name was taken for a signal pin with a test current of 100 mA",
+    "local-names": "Names on many separate nets were taken for local names of placed cells",
+    "label-on-nothing": "A label lies on no shape and names nothing",
+    "unnamed-pad": "A bond pad without a name was taken for a signal pin",
+    "pad-on-nothing": "A bond pad lies on no conductor and is no pin",
+    "nets-whole-block": (
+        "Nets and pins are those of the whole block; bodies, ties and injectors only those of"
+        " the window"
+    ),
+    "nets-too-many": (
+        "The whole block is too large for its nets to be traced; nets, ties and pins are not judged"
+    ),
+    "left-out": "A part of the layout was left out, as the block file says",
 }

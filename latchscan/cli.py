@@ -10,7 +10,6 @@ import contextlib
 import math
 import os
 import signal
-import sys
 import traceback
 from collections.abc import Iterator, Sequence
 from pathlib import Path
@@ -20,18 +19,26 @@ from typing import TYPE_CHECKING
 import click
 
 from latchscan import __version__
+from latchscan.cli_block import block
+from latchscan.cli_terminal import (
+    COULD_NOT_CONCLUDE,
+    COULD_NOT_START,
+    LIMIT_FAILED,
+    NOTHING_FAILED,
+    SIGNALLED,
+    available_cores,
+    given_path,
+    optional_path,
+    painter,
+    print_out,
+    progress,
+)
 from latchscan.errors import LatchscanError, OptionError, OutputError
 
 if TYPE_CHECKING:
     from latchscan.layout.model import Box
-    from latchscan.report.summary import Paint
 
-NOTHING_FAILED = 0
-LIMIT_FAILED = 1
-COULD_NOT_START = 2
-COULD_NOT_CONCLUDE = 3
-SIGNALLED = 128
-"""What shells expect of a program that a signal ended: this plus the signal's number."""
+__all__ = ["available_cores", "commands", "painter", "run"]
 
 MOST_JOBS = 256
 """More processes than this fit no machine that the work is meant for."""
@@ -50,7 +57,7 @@ def run(arguments: Sequence[str] | None = None) -> int:
     """Run the command line and return its exit status; no exception leaves this function."""
     status = _guarded(arguments)
     try:
-        _print("")
+        print_out("")
     except OutputError as error:
         return _complain(error.exit_status, error.message, error.hint)
     return status
@@ -96,25 +103,6 @@ def _stoppable() -> Iterator[None]:
     finally:
         for number, handler in before.items():
             signal.signal(number, handler)
-
-
-def _print(text: str) -> None:
-    """Print on standard output; a reader that has gone is no reason to complain.
-
-    Raises
-    ------
-    OutputError
-        It takes nothing, for a reason other than that nobody reads.
-    """
-    try:
-        click.echo(text, nl=False, color=True)
-        sys.stdout.flush()
-    except OSError as error:
-        # give the interpreter's own last flush somewhere to go
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        if not isinstance(error, BrokenPipeError):
-            reason = (error.strerror or str(error)).lower()
-            raise OutputError(f"standard output: cannot be written: {reason}") from error
 
 
 def _guarded(arguments: Sequence[str] | None) -> int:
@@ -174,23 +162,6 @@ def _complain(status: int, message: str, hint: str) -> int:
     return status
 
 
-def available_cores() -> int:
-    """Cores that this process may use."""
-    if hasattr(os, "sched_getaffinity"):
-        return len(os.sched_getaffinity(0))
-    return os.cpu_count() or 1
-
-
-def given_path(ctx: click.Context, param: click.Parameter, value: str) -> Path:
-    """The path as written; empty text, which would mean the current directory, fails.
-
-    What else may be wrong with a path is for its reader to say.
-    """
-    if not value:
-        raise click.BadParameter("expected a path, got nothing", ctx, param)
-    return Path(value)
-
-
 @click.group(
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 80},
     epilog=_EXAMPLE,
@@ -219,6 +190,13 @@ def commands() -> None:
     callback=given_path,
     help="Directory for scan.json, emitters.csv and heatmap.svg.",
 )
+@click.option(
+    "--block",
+    "block_file",
+    metavar="FILE",
+    callback=optional_path,
+    help="Block file with supplies and pins, instead of LAYOUT's name with .yaml.",
+)
 @click.option("--top", metavar="CELL", help="Top cell, when the layout has several.")
 @click.option(
     "--window",
@@ -231,7 +209,12 @@ def commands() -> None:
     "--temperature",
     type=float,
     metavar="C",
-    help="Temperature [degrees Celsius] instead of the technology's.",
+    help="Temperature [degrees Celsius] instead of the block's or technology's.",
+)
+@click.option(
+    "--internal-injectors",
+    is_flag=True,
+    help="Take diffusions on internal nodes and foreign supplies for injectors.",
 )
 @click.option(
     "--jobs",
@@ -245,14 +228,17 @@ def scan(
     layout: Path,
     tech: str,
     out_dir: Path,
+    block_file: Path | None,
     top: str | None,
     window: tuple[float, float, float, float] | None,
     temperature: float | None,
+    internal_injectors: bool,
     jobs: int | None,
     quiet: bool,
 ) -> int:
     """Scan LAYOUT (GDSII or OASIS, gzipped or not) and write the results.
 
+    A block file BLOCK.yaml beside BLOCK.gds says what the layout cannot: supplies, pins.
     Exit status: 0 nothing failed, 1 a limit failed, 2 could not start, 3 could not conclude.
     """
     window_um = None if window is None else checked_window(window)
@@ -263,21 +249,30 @@ def scan(
     from latchscan.report.write import require_directory
 
     require_directory(out_dir)
-    from latchscan.layout.source import open_layout
+    from latchscan.block.load import load_block, load_block_beside
+    from latchscan.block_fit import open_block_layout
     from latchscan.scan import ScanOptions
     from latchscan.scan import scan as run_scan
-    from latchscan.tasks import Silent, open_workers
+    from latchscan.tasks import open_workers
     from latchscan.technology.load import load_technology
 
     loaded = load_technology(tech)
-    source = open_layout(layout, technology=loaded.technology, top=top)
-    options = ScanOptions(window_um=window_um, temperature_c=temperature)
-    progress = Bars() if sys.stderr.isatty() and not quiet else Silent()
-    with open_workers(jobs or available_cores(), progress) as workers:
+    said = load_block_beside(layout) if block_file is None else load_block(block_file)
+    source = open_block_layout(layout, technology=loaded.technology, top=top, loaded=said)
+    if temperature is None and said is not None:
+        temperature = said.block.temperature_c
+    options = ScanOptions(
+        window_um=window_um,
+        temperature_c=temperature,
+        block=said,
+        internal_injectors=internal_injectors
+        or (said is not None and said.block.internal_injectors),
+    )
+    with open_workers(jobs or available_cores(), progress(quiet=quiet)) as workers:
         result = run_scan(source, loaded, options, workers)
     files = write_reports(result, out_dir)
     if not quiet:
-        _print(summary(result, files, painter()))
+        print_out(summary(result, files, painter()))
     if result.unsolved_count:
         return COULD_NOT_CONCLUDE
     failed = any(finding.severity == "fail" for finding in result.findings)
@@ -303,7 +298,7 @@ def check(file: str) -> int:
     path, content = read_technology_file(file)
     problems = check_technology(content, str(path))
     lines = [str(problem) for problem in problems] or [f"{path}: no problems"]
-    _print("".join(line + "\n" for line in lines))
+    print_out("".join(line + "\n" for line in lines))
     return COULD_NOT_START if problems else NOTHING_FAILED
 
 
@@ -314,8 +309,11 @@ def schema() -> int:
 
     from latchscan.technology.schema import technology_schema
 
-    _print(json.dumps(technology_schema(), indent=2) + "\n")
+    print_out(json.dumps(technology_schema(), indent=2) + "\n")
     return NOTHING_FAILED
+
+
+commands.add_command(block)
 
 
 def checked_window(window: tuple[float, float, float, float]) -> Box:
@@ -342,39 +340,3 @@ def require_temperature(temperature_c: float) -> None:
             f"--temperature: expected {COLDEST_C:g} to {HOTTEST_C:g} degrees Celsius, got"
             f" {temperature_c:g}"
         )
-
-
-def painter() -> Paint:
-    """Colours for the summary when it goes to a terminal that wants them, else none."""
-    from latchscan.report.summary import unpainted
-
-    if not sys.stdout.isatty() or os.environ.get("NO_COLOR") or os.environ.get("TERM") == "dumb":
-        return unpainted
-    colours = {"fail": "red", "watch": "yellow", "good": "green"}
-
-    def paint(text: str, severity: str) -> str:
-        return click.style(text, fg=colours[severity], bold=True)
-
-    return paint
-
-
-class Bars:
-    """Progress on standard error, one bar a stage."""
-
-    def __init__(self) -> None:
-        from tqdm import tqdm
-
-        self._tqdm = tqdm
-        self._bar = tqdm(total=0, disable=True)
-
-    def begin(self, stage: str, total: int) -> None:
-        """Start the bar of a stage."""
-        self._bar.close()
-        self._bar = self._tqdm(
-            total=total, desc=stage, file=sys.stderr, leave=False, dynamic_ncols=True,
-            colour=None,
-        )  # fmt: skip
-
-    def step(self, count: int = 1) -> None:
-        """Advance the bar."""
-        self._bar.update(count)

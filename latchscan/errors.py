@@ -46,6 +46,10 @@ class TechnologyError(InputError):
     """The technology file is wrong."""
 
 
+class BlockError(InputError):
+    """The block file is wrong."""
+
+
 class OptionError(InputError):
     """A command-line option is wrong or contradicts the layout."""
 

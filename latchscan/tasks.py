@@ -13,14 +13,19 @@ import sys
 import threading
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Executor, ProcessPoolExecutor
+from concurrent.futures import wait as futures_wait
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from dataclasses import dataclass, field
 from functools import partial
 from multiprocessing.connection import wait
-from typing import Protocol, TypeVar
+from types import FrameType
+from typing import Any, Protocol, TypeVar
 
 from latchscan.errors import AnalysisError
+
+LONGEST_HOLD_S = 0.1
+"""A signal takes effect after at most this long while results are awaited [s]."""
 
 Item = TypeVar("Item")
 Result = TypeVar("Result")
@@ -70,7 +75,7 @@ class Workers:
         source: Iterator[Result] = (
             map(function, items)
             if self.executor is None or len(items) < 2
-            else self.executor.map(function, items)
+            else _results(self.executor, function, items)
         )
         try:
             for result in source:
@@ -95,6 +100,49 @@ class Workers:
         leaves its rows open, which no rule takes for passed.
         """
         return self.map(stage, partial(_result_or_none, function), items)
+
+
+def _results(
+    executor: Executor, function: Callable[[Item], Result], items: Sequence[Item]
+) -> Iterator[Result]:
+    """Results in order, as they come.
+
+    A handler that raises in the middle of the pool's own code would leave one of its locks
+    taken for ever, so signals wait until the pool is not being touched.
+    """
+    with _signals_held() as caught:
+        futures = [executor.submit(function, item) for item in items]
+        for future in futures:
+            while not caught and not future.done():
+                futures_wait([future], timeout=LONGEST_HOLD_S)
+            if caught:
+                return
+            yield future.result()
+
+
+@contextmanager
+def _signals_held() -> Iterator[list[int]]:
+    """Collect the signals that would raise here, and let them act on leaving."""
+    caught: list[int] = []
+    held: dict[int, Callable[[int, FrameType | None], Any]] = {}
+    if threading.current_thread() is threading.main_thread():
+        for number in _ending_signals():
+            handler = signal.getsignal(number)
+            if callable(handler):
+                held[number] = handler
+                signal.signal(number, lambda number, _frame: caught.append(number))
+    try:
+        yield caught
+    finally:
+        for taken, handler in held.items():
+            signal.signal(taken, handler)
+        for first in caught[:1]:
+            held[first](first, None)
+
+
+def _ending_signals() -> list[signal.Signals]:
+    known = (getattr(signal, name, None) for name in ("SIGINT", "SIGTERM", "SIGHUP"))
+    return [number for number in known if number is not None]
 
 
 def _result_or_none(function: Callable[[Item], Result], item: Item) -> Result | None:
@@ -125,10 +173,8 @@ def open_workers(jobs: int, progress: Progress) -> Iterator[Workers]:
 
 def _begin_worker() -> None:
     """Leave signals to the parent, which ends its workers, and end with it if it is killed."""
-    for name in ("SIGINT", "SIGTERM", "SIGHUP"):
-        number = getattr(signal, name, None)
-        if number is not None:
-            signal.signal(number, signal.SIG_IGN)
+    for number in _ending_signals():
+        signal.signal(number, signal.SIG_IGN)
     threading.Thread(target=_leave_with_parent, daemon=True).start()
 
 

@@ -2,9 +2,13 @@
 
 The block is invented: four outputs that switch irrigation valves, their pads, a strip of
 control logic, an isolated p-well for the sense amplifier and a diffusion resistor, in the
-invented process ``larch180``.  Sound parts come first; then the *islands*: small patches, each
-with one planted fault or one near-miss.  `FAULTS` and `NEAR_MISSES` say which rule must find
-what, where, and with which measure; the tests read these tables.
+invented process ``larch180``.  Sound parts come first; then the *islands* and *cages*: small
+patches, each with one planted fault or one near-miss.  `draw_block` returns which rule must
+find what, where, and with which measure; the tests read these tables.
+
+The logic and the islands are on VDD and VSS, the drivers on VDDIO and VSSIO.  Metal 1 wires
+cells, metal 2 is rails from left to right, metal 3 trunks from below to above, metal 4 pads and
+pins; ``valve_driver.yaml`` says what the pins are.
 
 Run ``python samples/valve_driver.py [OUT.gds]``; the bytes are the same every time.
 """
@@ -14,149 +18,59 @@ from __future__ import annotations
 import datetime
 import sys
 from collections.abc import Callable
-from dataclasses import dataclass
 from pathlib import Path
 
 import gdstk
+import valve_driver_islands as islands
+import valve_driver_rings as rings
+import valve_driver_ties as ties
+from valve_driver_shapes import (
+    ISLAND_STEP_UM,
+    LAYERS,
+    PAD_ROWS_UM,
+    PAD_UM,
+    RAILS_UM,
+    Drawing,
+    Planted,
+    frame,
+    new_library,
+    rails,
+    to_vdd,
+    to_vss,
+)
 
-LAYERS = {
-    "nwell": (3, 0),
-    "deep_nwell": (4, 0),
-    "active": (10, 0),
-    "poly": (15, 0),
-    "nplus": (12, 0),
-    "pplus": (13, 0),
-    "contact": (20, 0),
-    "metal1": (21, 0),
-    "pad": (30, 0),
-    "resistor_marker": (41, 0),
-    "injector_marker": (42, 0),
-    "text": (60, 0),
-}
-"""Layer/datatype of each layer, as ``techfiles/larch180.yaml`` names them."""
+__all__ = ["LAYERS", "Planted", "draw_block", "main"]
 
-WIDTH_UM, HEIGHT_UM = 500.0, 400.0
-CONTACT_UM, CONTACT_PITCH_UM, CONTACT_INSET_UM = 0.22, 0.5, 0.14
-IMPLANT_OVERLAP_UM = 0.2
+WIDTH_UM, HEIGHT_UM = 560.0, 506.0
+TRUNKS_UM = {"VSS": 547.0, "VDD": 550.0, "VDDIO": 553.0}
+"""Left edge of each metal 3 trunk along the right side; they are 1.5 um wide."""
+RAIL_END_UM = 555.0
+MAIN_VSS_UM = (127.5, 129.5)
+MAIN_VDD_UM = (131.0, 133.0)
+"""Bottom and top of the metal 2 rails between the drivers and the logic."""
 
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Planted:
-    """One planted fault or near-miss.
-
-    Attributes
-    ----------
-    name
-        What was planted.
-    rule
-        Rule that must find it, or must just not.
-    x_um, y_um
-        Where the worst measure lies.
-    measured
-        The measure there in the rule's unit, worked out by hand; None where it is a field
-        solution (resistance, loop gain) that no hand calculation gives.
-    """
-
-    name: str
-    rule: str
-    x_um: float
-    y_um: float
-    measured: float | None = None
-
-
-class Drawing:
-    """One layout cell and the shapes of the process, all lengths in um."""
-
-    def __init__(self, library: gdstk.Library, name: str) -> None:
-        self.cell = library.new_cell(name)
-        self.contact = library["contact"]
-
-    def rect(self, layer: str, x0: float, y0: float, x1: float, y1: float) -> None:
-        """Draw a rectangle."""
-        number, datatype = LAYERS[layer]
-        self.cell.add(gdstk.rectangle((x0, y0), (x1, y1), layer=number, datatype=datatype))
-
-    def contacts(self, x0: float, y0: float, x1: float, y1: float) -> None:
-        """Fill a rectangle with contacts under metal."""
-        inner = 2 * CONTACT_INSET_UM + CONTACT_UM
-        self.cell.add(
-            gdstk.Reference(
-                self.contact,
-                (x0 + CONTACT_INSET_UM, y0 + CONTACT_INSET_UM),
-                columns=int((x1 - x0 - inner) / CONTACT_PITCH_UM + 1e-6) + 1,
-                rows=int((y1 - y0 - inner) / CONTACT_PITCH_UM + 1e-6) + 1,
-                spacing=(CONTACT_PITCH_UM, CONTACT_PITCH_UM),
-            )
-        )
-        self.rect("metal1", x0, y0, x1, y1)
-
-    def diffusion(self, kind: str, x0: float, y0: float, x1: float, y1: float) -> None:
-        """Draw an active area with its implant; kind is "p" or "n"."""
-        self.rect("active", x0, y0, x1, y1)
-        grow = IMPLANT_OVERLAP_UM
-        self.rect(f"{kind}plus", x0 - grow, y0 - grow, x1 + grow, y1 + grow)
-
-    def strap(self, kind: str, x0: float, y0: float, x1: float, y1: float) -> None:
-        """Draw a contacted diffusion: a tap in its own body, a source elsewhere."""
-        self.diffusion(kind, x0, y0, x1, y1)
-        self.contacts(x0, y0, x1, y1)
-
-    def ring(
-        self, kind: str, x0: float, y0: float, x1: float, y1: float, *, width: float = 1.0
-    ) -> None:
-        """Draw a closed contacted ring whose outer edge is the given box."""
-        self.strap(kind, x0, y0, x1, y0 + width)
-        self.strap(kind, x0, y1 - width, x1, y1)
-        self.strap(kind, x0, y0 + width, x0 + width, y1 - width)
-        self.strap(kind, x1 - width, y0 + width, x1, y1 - width)
-
-    def transistors(
-        self, kind: str, x0: float, y0: float, *, gates: int, width: float, pitch: float = 1.0
-    ) -> None:
-        """Draw one active crossed by gates: ``gates + 1`` sources and drains."""
-        self.diffusion(kind, x0, y0, x0 + gates * pitch + 0.6, y0 + width)
-        for gate in range(gates):
-            left = x0 + 0.6 + gate * pitch
-            self.rect("poly", left, y0 - 0.3, left + pitch - 0.6, y0 + width + 0.3)
-        for piece in range(gates + 1):
-            left = x0 + piece * pitch
-            self.contacts(left, y0, left + 0.6, y0 + width)
-
-    def label(self, text: str, x: float, y: float) -> None:
-        """Write a pin name at a point."""
-        number, texttype = LAYERS["text"]
-        self.cell.add(gdstk.Label(text, (x, y), layer=number, texttype=texttype))
-
-    def place(
-        self,
-        cell: gdstk.Cell,
-        x: float,
-        y: float,
-        *,
-        mirrored: bool = False,
-        columns: int = 1,
-        step: float = 0.0,
-    ) -> None:
-        """Place a cell, upside down where `mirrored`, as a row of `columns`."""
-        self.cell.add(
-            gdstk.Reference(
-                cell, (x, y), x_reflection=mirrored, columns=columns, rows=1, spacing=(step, 0)
-            )
-        )
-
-
-# --- sound parts ---------------------------------------------------------------------------
+# --- sound parts: logic ----------------------------------------------------------------------
 
 
 ROW_UM = 8.0
 GROUP_UM = 17.6
+LOGIC_AT_UM = (20.0, 142.0)
+LOGIC_ROWS, LOGIC_GROUPS = 12, 11
 
 
 def logic_cell(library: gdstk.Library, name: str, gates: int) -> gdstk.Cell:
-    """One logic cell: n below, p above, its part of the row's well."""
+    """One logic cell: n below, p above, its part of the row's well.
+
+    Sources are on the rails at either edge, each drain of n and p on one node of its own.
+    """
     drawing = Drawing(library, name)
     drawing.transistors("n", 0.4, 1.0, gates=gates, width=1.6)
     drawing.transistors("p", 0.4, 4.8, gates=gates, width=2.2)
+    for gate in range(gates):
+        drawing.rect("poly", 1.0 + gate, 2.9, 1.4 + gate, 4.5)
+    drawing.fingers(0.4, 0.0, 1.0, gates=gates, first=0)
+    drawing.fingers(0.4, 7.0, ROW_UM, gates=gates, first=0)
+    drawing.fingers(0.4, 2.6, 4.8, gates=gates, first=1)
     drawing.rect("nwell", -0.4, 4.0, gates + 1.8, ROW_UM + 0.4)
     return drawing.cell
 
@@ -166,6 +80,8 @@ def tap_cell(library: gdstk.Library) -> gdstk.Cell:
     drawing = Drawing(library, "row_tap")
     drawing.strap("p", 0.5, 0.8, 1.5, 2.8)
     drawing.strap("n", 0.5, 4.8, 1.5, 7.0)
+    drawing.rect("metal1", 0.5, 0.0, 1.5, 0.8)
+    drawing.rect("metal1", 0.5, 7.0, 1.5, ROW_UM)
     drawing.rect("nwell", -0.4, 4.0, 2.4, ROW_UM + 0.4)
     return drawing.cell
 
@@ -182,51 +98,193 @@ def logic_group(library: gdstk.Library) -> tuple[gdstk.Cell, gdstk.Cell]:
     return drawing.cell, tap
 
 
-def logic(drawing: Drawing, library: gdstk.Library, x: float, y: float) -> None:
-    """Twelve rows of control logic, every second one upside down."""
+def logic(drawing: Drawing, library: gdstk.Library) -> None:
+    """Twelve rows of control logic, every second one upside down, and their rails."""
     group, tap = logic_group(library)
-    columns = 11
-    for row in range(12):
+    x, y = LOGIC_AT_UM
+    end = x + LOGIC_GROUPS * GROUP_UM
+    for row in range(LOGIC_ROWS):
         mirrored = row % 2 == 1
         base = y + (row + 1 if mirrored else row) * ROW_UM
-        drawing.place(group, x, base, mirrored=mirrored, columns=columns, step=GROUP_UM)
-        drawing.place(tap, x + columns * GROUP_UM, base, mirrored=mirrored)
+        drawing.place(group, x, base, mirrored=mirrored, columns=LOGIC_GROUPS, step=GROUP_UM)
+        drawing.place(tap, end, base, mirrored=mirrored)
+    left, right = x - 5, end + 8
+    for rail in range(LOGIC_ROWS + 1):
+        lower, upper = y + rail * ROW_UM - 0.3, y + rail * ROW_UM + 0.3
+        if rail % 2 == 0:
+            drawing.rect("metal1", left, lower, end + 2, upper)
+            drawing.stack(left, lower, left + 2, upper, upper=3)
+        else:
+            drawing.rect("metal1", x, lower, right, upper)
+            drawing.stack(right - 2, lower, right, upper, upper=3)
+    top = y + LOGIC_ROWS * ROW_UM
+    drawing.rect("metal3", left, MAIN_VSS_UM[0], left + 2, top + 0.3)
+    drawing.stack(left, MAIN_VSS_UM[0], left + 2, MAIN_VSS_UM[1], lower=2, upper=3)
+    drawing.rect("metal3", right - 2, MAIN_VDD_UM[0], right, top)
+    drawing.stack(right - 2, MAIN_VDD_UM[0], right, MAIN_VDD_UM[1], lower=2, upper=3)
+
+
+# --- sound parts: drivers, pads and supplies -------------------------------------------------
+
+
+DRIVER_AT_UM = (16.0, 70.0)
+DRIVER_STEP_UM = 118.0
+VSSIO_RAIL_UM = (70.2, 71.3)
+DRIVER_VDDIO_UM = (74.2, 75.3)
+"""Bottom and top of the metal 2 rails of the drivers, in the block."""
+LOWER_PADS = (
+    "VALVE0",
+    "VSSIO",
+    "VALVE1",
+    "VDDIO",
+    "VALVE2",
+    "VSS",
+    "VALVE3",
+    "VDD",
+    "CLOCK",
+)
+UPPER_PADS = ("FLOW", "LEVEL", "ALARM", "TEST", "RESET", "BIAS", "DATA", "VDD", "VSS")
 
 
 def output_driver(library: gdstk.Library) -> gdstk.Cell:
-    """A pull-down and a pull-up with closed tap rings, marked as reached from a pad."""
+    """A pull-down and a pull-up with closed tap rings, and their wires to the pad."""
     drawing = Drawing(library, "output_driver")
-    drawing.ring("p", 0, 0, 30, 44, width=1.5)
-    drawing.transistors("n", 4.7, 7, gates=20, width=30)
-    drawing.rect("injector_marker", 4, 6, 26, 38)
-    drawing.ring("p", 50, 0, 106, 44, width=1.5)
-    drawing.rect("nwell", 53, 3, 103, 41)
-    drawing.ring("n", 54, 4, 102, 40, width=1.5)
-    for lower in (7.5, 24.0):
-        drawing.transistors("p", 59.7, lower, gates=36, width=12.5)
-    drawing.strap("n", 58, 21.3, 98, 22.7)
-    drawing.rect("injector_marker", 59, 7, 97, 37)
+    pull_down(drawing)
+    pull_up(drawing)
+    drawing.rect("metal4", 12, -13, 18, 40.2)
+    drawing.rect("metal4", 12, 37, 74, 40.2)
+    drawing.stack(70, 37.1, 74, 37.9, lower=2, upper=4)
     return drawing.cell
 
 
-def pads(drawing: Drawing, names: tuple[str, ...], y: float) -> None:
+def pull_down(drawing: Drawing) -> None:
+    """Wire 20 n transistors: sources to their ring, drains to a bar above them."""
+    drawing.ring("p", 0, 0, 30, 44, width=1.5)
+    drawing.transistors("n", 4.7, 7, gates=20, width=30)
+    drawing.fingers(4.7, 5.0, 7.0, gates=20, first=0)
+    drawing.rect("metal1", 4.7, 4.0, 25.3, 5.0)
+    drawing.rect("metal1", 13, 1.5, 17, 4.0)
+    drawing.fingers(4.7, 37.0, 39.0, gates=20, first=1)
+    drawing.rect("metal1", 4.7, 39.0, 25.3, 40.0)
+    drawing.stack(12, 39.0, 18, 40.0, upper=4)
+
+
+def pull_up(drawing: Drawing) -> None:
+    """Wire two rows of p transistors: sources to the tap between them, drains to two bars."""
+    drawing.ring("p", 50, 0, 106, 44, width=1.5)
+    drawing.rect("nwell", 53, 3, 103, 41)
+    drawing.ring("n", 54, 4, 102, 40, width=1.5)
+    drawing.strap("n", 58, 21.3, 98, 22.7)
+    drawing.rect("metal1", 55, 21.3, 101, 22.7)
+    for lower in (7.5, 24.0):
+        drawing.transistors("p", 59.7, lower, gates=36, width=12.5)
+    drawing.fingers(59.7, 20.0, 21.3, gates=36, first=0)
+    drawing.fingers(59.7, 22.7, 24.0, gates=36, first=0)
+    drawing.fingers(59.7, 6.9, 7.5, gates=36, first=1)
+    drawing.fingers(59.7, 36.5, 37.1, gates=36, first=1)
+    for lower, upper in ((6.1, 6.9), (37.1, 37.9)):
+        drawing.rect("metal1", 59.7, lower, 96.3, upper)
+        drawing.stack(70, lower, 74, upper, upper=2)
+    drawing.rect("metal2", 70, 6.1, 74, 37.9)
+
+
+def drivers(drawing: Drawing, library: gdstk.Library) -> None:
+    """Four drivers, and the rails of their rings."""
+    driver = output_driver(library)
+    x, y = DRIVER_AT_UM
+    for index in range(4):
+        left = x + DRIVER_STEP_UM * index
+        drawing.place(driver, left, y)
+        drawing.stack(left + 2, VSSIO_RAIL_UM[0], left + 28, VSSIO_RAIL_UM[1], upper=2)
+        drawing.stack(left + 52, VSSIO_RAIL_UM[0], left + 104, VSSIO_RAIL_UM[1], upper=2)
+        drawing.stack(left + 56, DRIVER_VDDIO_UM[0], left + 100, DRIVER_VDDIO_UM[1], upper=2)
+    end = x + 3 * DRIVER_STEP_UM + 106
+    drawing.rect("metal2", x, VSSIO_RAIL_UM[0], end, VSSIO_RAIL_UM[1])
+    drawing.rect("metal2", x + 54, DRIVER_VDDIO_UM[0], RAIL_END_UM, DRIVER_VDDIO_UM[1])
+
+
+def wall(drawing: Drawing) -> None:
+    """A tapped n-well on VDDIO along the whole block, between the drivers and the logic."""
+    drawing.rect("nwell", 8, 123, 552, 126)
+    drawing.strap("n", 9, 124, 551, 125)
+    drawing.rect("metal1", 551, 124, RAIL_END_UM, 125)
+    drawing.stack(TRUNKS_UM["VDDIO"], 124, RAIL_END_UM, 125, upper=3)
+
+
+def pads(drawing: Drawing, names: tuple[str, ...], y: float, step: float) -> None:
     """A row of bond pads with their pin names."""
     for index, name in enumerate(names):
-        x = 14 + 60 * index
-        drawing.rect("metal1", x, y, x + 50, y + 50)
-        drawing.rect("pad", x + 2, y + 2, x + 48, y + 48)
-        drawing.label(name, x + 25, y + 25)
+        x = 14 + step * index
+        drawing.rect("metal4", x, y, x + PAD_UM, y + PAD_UM)
+        drawing.rect("pad", x + 2, y + 2, x + PAD_UM - 2, y + PAD_UM - 2)
+        drawing.label(name, x + PAD_UM / 2, y + PAD_UM / 2)
 
 
-def sense_amplifier(drawing: Drawing, x: float, y: float) -> None:
-    """An isolated p-well, ringed and tapped as it should be."""
-    isolated_pwell(drawing, x, y)
+def supplies(drawing: Drawing, top_rails: dict[str, tuple[float, float]]) -> None:
+    """Main rails, trunks, and the supply pads down to them.
+
+    `top_rails` are the bottom and top of the uppermost metal 2 rails of VSS and VDD.
+    """
+    mains = {"VSS": MAIN_VSS_UM, "VDD": MAIN_VDD_UM, "VDDIO": DRIVER_VDDIO_UM}
+    for name, (lower, upper) in mains.items():
+        x = TRUNKS_UM[name]
+        drawing.rect("metal3", x, lower, x + 1.5, 446)
+        drawing.stack(x, lower, x + 1.5, upper, lower=2, upper=3)
+    drawing.rect("metal2", 14, MAIN_VSS_UM[0], WIDTH_UM - 0.2, MAIN_VSS_UM[1])
+    drawing.rect("metal2", 14, MAIN_VDD_UM[0], RAIL_END_UM, MAIN_VDD_UM[1])
+    drawing.stack(WIDTH_UM - 1.8, MAIN_VSS_UM[0], WIDTH_UM - 0.2, MAIN_VSS_UM[1], upper=2)
+    lower_edge = PAD_ROWS_UM[0] + PAD_UM - 1
+    for x, (lower, upper), metal in (
+        (96, VSSIO_RAIL_UM, 1),
+        (214, DRIVER_VDDIO_UM, 2),
+        (336, MAIN_VSS_UM, 2),
+        (454, MAIN_VDD_UM, 2),
+    ):
+        drawing.rect("metal4", x, lower_edge, x + 6, upper)
+        drawing.stack(x, lower, x + 6, upper, lower=metal, upper=4)
+    for x, name in ((456, "VDD"), (516, "VSS")):
+        lower, upper = top_rails[name]
+        drawing.rect("metal4", x, lower, x + 6, PAD_ROWS_UM[1] + 1)
+        drawing.stack(x, lower, x + 6, upper, lower=2, upper=4)
+
+
+def to_trunk(drawing: Drawing, name: str, lower: float, upper: float) -> None:
+    """Join a metal 2 rail that ends at the trunks to its own."""
+    x = TRUNKS_UM[name]
+    drawing.stack(x, lower, x + 1.5, upper, lower=2, upper=3)
+
+
+def clock_input(drawing: Drawing, x: float, y: float) -> Planted:
+    """The diode of CLOCK in a closed ring and a closed collector: a near-miss."""
+    rings.cage(drawing, x, y)
+    drawing.ring("p", *rings.ring_corner(x, y))
+    _, _, ring_x, ring_y = rings.ring_corner(x, y)
+    drawing.stack(ring_x - 0.8, ring_y - 0.8, ring_x - 0.2, ring_y - 0.2, upper=2)
+    drawing.rect("metal2", ring_x - 0.8, ring_y - 0.8, ring_x - 0.2, MAIN_VSS_UM[1])
+    drawing.stack(x + 0.5, DRIVER_VDDIO_UM[0], x + 1.5, DRIVER_VDDIO_UM[1], upper=2)
+    mid_x, mid_y = x + rings.CENTRE_UM[0], y + rings.CENTRE_UM[1]
+    drawing.rect("metal4", mid_x - 1, PAD_ROWS_UM[0] + PAD_UM - 1, mid_x + 1, mid_y)
+    return Planted(
+        name="diode of CLOCK in a closed ring", rule="ring-missing", x_um=mid_x, y_um=mid_y
+    )
+
+
+def sense_amplifier(drawing: Drawing, x: float, y: float) -> Planted:
+    """An isolated p-well, ringed and tapped as it should be: a near-miss."""
+    islands.isolated_pwell(drawing, x, y)
     drawing.ring("p", x + 8, y + 8, x + 44, y + 28)
+    to_vss(drawing, y, x + 20, y + 8.5)
     drawing.transistors("n", x + 16, y + 14, gates=18, width=8)
+    return Planted(
+        name="isolated p-well whose ring is closed",
+        rule="isolation-gap",
+        x_um=x + 26,
+        y_um=y + 18,
+    )
 
 
 def diffusion_resistor(drawing: Drawing, x: float, y: float) -> None:
-    """A p+ resistor along taps on both sides of its well."""
+    """A p+ resistor from VDD, along taps on both sides of its well."""
     frame(drawing, x, y)
     drawing.rect("nwell", x + 4, y + 8, x + 48, y + 28)
     drawing.strap("n", x + 5, y + 9, x + 47, y + 10)
@@ -235,348 +293,158 @@ def diffusion_resistor(drawing: Drawing, x: float, y: float) -> None:
     drawing.rect("resistor_marker", x + 10, y + 15.5, x + 42, y + 20.5)
     drawing.contacts(x + 8, y + 16, x + 10, y + 20)
     drawing.contacts(x + 42, y + 16, x + 44, y + 20)
+    to_vdd(drawing, y, x + 6, y + 9.5)
+    to_vdd(drawing, y, x + 46, y + 26.5)
+    to_vdd(drawing, y, x + 9, y + 18)
 
 
-# --- islands: one fault or near-miss each ----------------------------------------------------
+# --- the floor plan of faults and near-misses -----------------------------------------------
 
 
-ISLAND_UM = (52.0, 36.0)
-ISLAND_STEP_UM = (56.0, 40.0)
-
-
-def frame(drawing: Drawing, x: float, y: float) -> None:
-    """A closed substrate tap ring that keeps an island to itself."""
-    drawing.ring("p", x, y, x + ISLAND_UM[0], y + ISLAND_UM[1])
-
-
-def isolated_pwell(drawing: Drawing, x: float, y: float) -> None:
-    """A buried layer with a tapped n-well ring on it, around a p-well of 40 x 24 um."""
-    frame(drawing, x, y)
-    drawing.rect("deep_nwell", x + 3, y + 3, x + 49, y + 33)
-    x0, y0, x1, y1 = x + 2.5, y + 2.5, x + 49.5, y + 33.5
-    drawing.rect("nwell", x0, y0, x1, y + 6)
-    drawing.rect("nwell", x0, y + 30, x1, y1)
-    drawing.rect("nwell", x0, y + 6, x + 6, y + 30)
-    drawing.rect("nwell", x + 46, y + 6, x1, y + 30)
-    drawing.ring("n", x + 3.5, y + 3.5, x + 48.5, y + 32.5)
-
-
-def one_ended_well(drawing: Drawing, x: float, y: float, reach: float) -> None:
-    """A well with its only tap at the left; the last p+ ends `reach` um from it."""
-    frame(drawing, x, y)
-    drawing.rect("nwell", x + 4, y + 12, x + 48, y + 24)
-    drawing.strap("n", x + 5, y + 13, x + 7, y + 23)
-    drawing.strap("p", x + 9, y + 16, x + 13, y + 20)
-    drawing.strap("p", x + 7 + reach - 6, y + 16, x + 7 + reach, y + 20)
-
-
-def well_tapped_at_one_end(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: p+ 33 um from the only tap of its well."""
-    one_ended_well(drawing, x, y, 33.0)
-    return Planted(
-        name="well tapped at one end only",
-        rule="tap-distance",
-        x_um=x + 40,
-        y_um=y + 16,
-        measured=33.0,
-    )
-
-
-def well_tapped_near_enough(drawing: Drawing, x: float, y: float) -> Planted:
-    """Near-miss: p+ 19.9 um from the only tap of its well."""
-    one_ended_well(drawing, x, y, 19.9)
-    return Planted(
-        name="p+ 19.9 um from its tap",
-        rule="tap-distance",
-        x_um=x + 26.9,
-        y_um=y + 16,
-        measured=19.9,
-    )
-
-
-def bar_in_well(drawing: Drawing, x: float, y: float, gap: float) -> None:
-    """A p+ bar between two well taps `gap` um apart: its middle is farthest, no corner is."""
-    frame(drawing, x, y)
-    left, right = x + 26 - gap / 2, x + 26 + gap / 2
-    drawing.rect("nwell", left - 1.6, y + 5, right + 1.6, y + 31)
-    drawing.strap("n", left - 1, y + 6, left, y + 30)
-    drawing.strap("n", right, y + 6, right + 1, y + 30)
-    drawing.strap("p", left + 2, y + 16, right - 2, y + 20)
-
-
-def bar_between_distant_taps(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: the middle of a long p+ bar is 22.25 um from either tap."""
-    bar_in_well(drawing, x, y, 44.5)
-    return Planted(
-        name="long p+ bar between two taps",
-        rule="tap-distance",
-        x_um=x + 26,
-        y_um=y + 16,
-        measured=22.25,
-    )
-
-
-def bar_between_near_taps(drawing: Drawing, x: float, y: float) -> Planted:
-    """Near-miss: the middle of a long p+ bar is 19.8 um from either tap."""
-    bar_in_well(drawing, x, y, 39.6)
-    return Planted(
-        name="p+ bar with its middle 19.8 um from a tap",
-        rule="tap-distance",
-        x_um=x + 26,
-        y_um=y + 16,
-        measured=19.8,
-    )
-
-
-def isolated_pwell_with(drawing: Drawing, x: float, y: float, reach: float) -> None:
-    """An isolated p-well with its tap at the left; the last n+ ends `reach` um from it."""
-    isolated_pwell(drawing, x, y)
-    drawing.strap("p", x + 8, y + 10, x + 9, y + 26)
-    drawing.strap("n", x + 12, y + 16, x + 15, y + 20)
-    drawing.strap("n", x + 9 + reach - 5, y + 16, x + 9 + reach, y + 20)
-
-
-def isolated_pwell_tapped_at_one_end(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: n+ 27 um from the only tap of its isolated p-well."""
-    isolated_pwell_with(drawing, x, y, 27.0)
-    return Planted(
-        name="isolated p-well tapped at one end only",
-        rule="tap-distance",
-        x_um=x + 36,
-        y_um=y + 16,
-        measured=27.0,
-    )
-
-
-def isolated_pwell_tapped_near_enough(drawing: Drawing, x: float, y: float) -> Planted:
-    """Near-miss: n+ 19.5 um from the only tap of its isolated p-well."""
-    isolated_pwell_with(drawing, x, y, 19.5)
-    return Planted(
-        name="n+ 19.5 um from the tap of its isolated p-well",
-        rule="tap-distance",
-        x_um=x + 28.5,
-        y_um=y + 16,
-        measured=19.5,
-    )
-
-
-def untied_isolated_pwell(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: an isolated p-well without any tap."""
-    isolated_pwell(drawing, x, y)
-    drawing.strap("n", x + 12, y + 16, x + 15, y + 20)
-    return Planted(
-        name="isolated p-well without a tap", rule="untied-body", x_um=x + 26, y_um=y + 18
-    )
-
-
-def untied_well(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: a well without any tap."""
-    frame(drawing, x, y)
-    drawing.rect("nwell", x + 10, y + 10, x + 30, y + 26)
-    drawing.transistors("p", x + 13, y + 14, gates=6, width=6)
-    return Planted(name="well without a tap", rule="untied-body", x_um=x + 20, y_um=y + 18)
-
-
-def bare_tap(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: one of two well taps has no contact."""
-    frame(drawing, x, y)
-    drawing.rect("nwell", x + 8, y + 8, x + 40, y + 28)
-    drawing.strap("n", x + 9, y + 9, x + 10, y + 27)
-    drawing.diffusion("n", x + 30, y + 14, x + 31, y + 22)
-    drawing.transistors("p", x + 13, y + 14, gates=8, width=6)
-    return Planted(
-        name="well tap without a contact", rule="uncontacted-tap", x_um=x + 30.5, y_um=y + 18
-    )
-
-
-def far_contacts(drawing: Drawing, x: float, y: float, length: float) -> None:
-    """A substrate tap bar that runs on `length` um beyond its contacts' right edge."""
-    frame(drawing, x, y)
-    drawing.diffusion("p", x + 10, y + 17.64, x + 13.86 + length, y + 18.36)
-    drawing.contacts(x + 10, y + 17.75, x + 14, y + 18.25)
-
-
-def tap_beyond_contacts(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: a substrate tap reaches 26 um beyond its last contact."""
-    far_contacts(drawing, x, y, 26.0)
-    return Planted(
-        name="substrate tap 26 um beyond its last contact",
-        rule="tap-reach",
-        x_um=x + 39.86,
-        y_um=y + 17.64,
-        measured=(26.0**2 + 0.25**2) ** 0.5,
-    )
-
-
-def tap_just_beyond_contacts(drawing: Drawing, x: float, y: float) -> Planted:
-    """Near-miss: a substrate tap reaches 5.9 um beyond its last contact."""
-    far_contacts(drawing, x, y, 5.9)
-    return Planted(
-        name="substrate tap 5.9 um beyond its last contact",
-        rule="tap-reach",
-        x_um=x + 19.76,
-        y_um=y + 17.64,
-        measured=(5.9**2 + 0.25**2) ** 0.5,
-    )
-
-
-def injector_beside_well(drawing: Drawing, x: float, y: float, spacing: float) -> None:
-    """An n+ diode `spacing` um to the left of a tapped well."""
-    frame(drawing, x, y)
-    drawing.strap("n", x + 30 - spacing - 6, y + 15, x + 30 - spacing, y + 21)
-    drawing.rect("nwell", x + 30, y + 8, x + 48, y + 28)
-    drawing.ring("n", x + 31, y + 9, x + 47, y + 27)
-    drawing.strap("p", x + 36, y + 14, x + 42, y + 22)
-
-
-def marked_injector_too_near(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: a marked injector 6 um from a well."""
-    injector_beside_well(drawing, x, y, 6.0)
-    drawing.rect("injector_marker", x + 18, y + 15, x + 24, y + 21)
-    return Planted(
-        name="marked injector 6 um from a well",
-        rule="injector-spacing",
-        x_um=x + 24,
-        y_um=y + 15,
-        measured=6.0,
-    )
-
-
-def labelled_injector_too_near(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: a diode that a pin label names, 9 um from a well."""
-    injector_beside_well(drawing, x, y, 9.0)
-    drawing.label("FLOW", x + 18, y + 18)
-    return Planted(
-        name="pin diode 9 um from a well",
-        rule="injector-spacing",
-        x_um=x + 21,
-        y_um=y + 15,
-        measured=9.0,
-    )
-
-
-def labelled_injector_far_enough(drawing: Drawing, x: float, y: float) -> Planted:
-    """Near-miss: a diode that a pin label names, 15.1 um from a well."""
-    injector_beside_well(drawing, x, y, 15.1)
-    drawing.label("LEVEL", x + 12, y + 18)
-    return Planted(
-        name="pin diode 15.1 um from a well",
-        rule="injector-spacing",
-        x_um=x + 14.9,
-        y_um=y + 15,
-        measured=15.1,
-    )
-
-
-def supply_label_near(drawing: Drawing, x: float, y: float) -> Planted:
-    """Near-miss: a diffusion beside a well whose label is a supply, so no injector."""
-    injector_beside_well(drawing, x, y, 4.0)
-    drawing.label("VSS", x + 23, y + 18)
-    return Planted(
-        name="grounded diffusion 4 um from a well",
-        rule="injector-spacing",
-        x_um=x + 26,
-        y_um=y + 15,
-        measured=4.0,
-    )
-
-
-def narrow_neck(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: p+ at the end of a well arm 1.6 um narrow, within tap distance."""
-    frame(drawing, x, y)
-    drawing.rect("nwell", x + 6, y + 8, x + 14, y + 28)
-    drawing.rect("nwell", x + 14, y + 17, x + 32, y + 18.6)
-    drawing.ring("n", x + 7, y + 9, x + 13, y + 27)
-    drawing.strap("p", x + 28, y + 17.4, x + 31, y + 18.2)
-    return Planted(
-        name="p+ at the end of a narrow well arm",
-        rule="well-resistance",
-        x_um=x + 29.5,
-        y_um=y + 17.8,
-    )
-
-
-def weak_pair(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: p+ and n+ side by side, both near the limit of their tap distances."""
-    frame(drawing, x, y)
-    drawing.rect("nwell", x + 4, y + 18.5, x + 26, y + 20.7)
-    drawing.strap("n", x + 5, y + 19, x + 6, y + 20.2)
-    drawing.strap("p", x + 13, y + 19, x + 25, y + 20.2)
-    drawing.strap("n", x + 13, y + 16.8, x + 25, y + 18)
-    return Planted(
-        name="p+ and n+ side by side, taps far from both",
-        rule="loop-gain",
-        x_um=x + 19,
-        y_um=y + 18.5,
-    )
-
-
-def distant_substrate_tap(drawing: Drawing, x: float, y: float) -> Planted:
-    """Fault: n+ in the substrate 28 um from the nearest substrate tap."""
-    drawing.strap("p", x, y - 2, x + 1, y + 6)
-    drawing.strap("n", x + 25, y, x + 29, y + 4)
-    return Planted(
-        name="n+ far from every substrate tap",
-        rule="tap-distance",
-        x_um=x + 29,
-        y_um=y,
-        measured=28.0,
-    )
-
-
-FAULT_ISLANDS: tuple[Callable[[Drawing, float, float], Planted], ...] = (
-    well_tapped_at_one_end,
-    bar_between_distant_taps,
-    isolated_pwell_tapped_at_one_end,
-    untied_isolated_pwell,
-    untied_well,
-    bare_tap,
-    tap_beyond_contacts,
-    marked_injector_too_near,
-    labelled_injector_too_near,
-    narrow_neck,
-    weak_pair,
+Draw = Callable[[Drawing, float, float], Planted]
+FAULT_ISLANDS: tuple[Draw, ...] = (
+    islands.well_tapped_at_one_end,
+    islands.bar_between_distant_taps,
+    islands.isolated_pwell_tapped_at_one_end,
+    islands.untied_isolated_pwell,
+    islands.untied_well,
+    islands.bare_tap,
+    islands.tap_beyond_contacts,
+    islands.narrow_neck,
+    islands.weak_pair,
+    ties.well_tied_through_poly,
+    ties.well_on_two_supplies,
+    ties.p_above_its_well,
+    ties.wells_too_near,
+    ties.leaking_pwell,
 )
-NEAR_MISS_ISLANDS: tuple[Callable[[Drawing, float, float], Planted], ...] = (
-    well_tapped_near_enough,
-    bar_between_near_taps,
-    isolated_pwell_tapped_near_enough,
-    tap_just_beyond_contacts,
-    labelled_injector_far_enough,
-    supply_label_near,
+NEAR_MISS_ISLANDS: tuple[Draw, ...] = (
+    islands.well_tapped_near_enough,
+    islands.bar_between_near_taps,
+    islands.isolated_pwell_tapped_near_enough,
+    islands.tap_just_beyond_contacts,
+    islands.supply_label_near,
+    ties.well_tied_through_short_poly,
+    ties.well_on_one_supply,
+    ties.p_below_its_well,
+    ties.wells_at_limit,
 )
+PIN_ISLANDS: tuple[tuple[Draw, bool], ...] = (
+    (islands.labelled_injector_too_near, True),
+    (islands.labelled_injector_far_enough, False),
+    (rings.pad_through_metal4, True),
+    (rings.protected_diode_too_near, True),
+    (rings.protected_diode_far_enough, False),
+    (ties.well_on_pad, True),
+    (rings.missing_double_ring, True),
+    (islands.marked_injector_too_near, True),
+)
+"""The islands under the upper pads, in their order, and whether each is a fault."""
+CAGES: tuple[tuple[Draw, bool], ...] = (
+    (rings.open_ring, True),
+    (rings.bridged_ring, False),
+    (rings.starved_ring, True),
+    (rings.ring_contacted_on_both_sides, False),
+    (rings.thin_ring, True),
+    (rings.wide_ring, False),
+    (rings.collector_on_ground, True),
+    (rings.missing_ring, True),
+)
+ISLANDS_AT_UM = (260.0, 142.0)
+"""Lower left corner; frames stand more than a ring's reach of 30 um from the drivers' wells."""
+LEFT_AT_UM = 20.0
+LEFT_ROWS = (3, 4)
+"""Rows of islands that go on to the left of the others, above the logic."""
+CAGES_AT_UM = (13.0, 346.0)
+PIN_ISLANDS_AT_UM = (13.0, 402.0)
 
 
-def islands(drawing: Drawing) -> tuple[tuple[Planted, ...], tuple[Planted, ...]]:
-    """Draw every island on a grid of four columns; return the faults and the near-misses."""
-    planted = []
+class Plan:
+    """Faults and near-misses as they are drawn."""
+
+    def __init__(self) -> None:
+        self.faults: list[Planted] = []
+        self.near_misses: list[Planted] = []
+
+    def add(self, planted: Planted, *, fault: bool) -> None:
+        """Enter one of either."""
+        (self.faults if fault else self.near_misses).append(planted)
+
+
+def core_islands(drawing: Drawing, plan: Plan) -> None:
+    """Five columns and rows of islands beside the logic, and what lies above the logic."""
+    x, y = ISLANDS_AT_UM
+    step_x, step_y = ISLAND_STEP_UM
     for index, draw in enumerate(FAULT_ISLANDS + NEAR_MISS_ISLANDS):
-        x = 264 + ISLAND_STEP_UM[0] * (index % 4)
-        y = 130 + ISLAND_STEP_UM[1] * (index // 4)
-        planted.append(draw(drawing, x, y))
-    lone = distant_substrate_tap(drawing, 95.0, 280.0)
-    return (*planted[: len(FAULT_ISLANDS)], lone), tuple(planted[len(FAULT_ISLANDS) :])
+        placed = draw(drawing, x + step_x * (index % 5), y + step_y * (index // 5))
+        plan.add(placed, fault=index < len(FAULT_ISLANDS))
+    for row in range(5):
+        base = y + step_y * row
+        rails(drawing, LEFT_AT_UM if row in LEFT_ROWS else x, RAIL_END_UM, base)
+        join_rails(drawing, base)
+    lower, upper = (y + step_y * row for row in LEFT_ROWS)
+    plan.add(sense_amplifier(drawing, LEFT_AT_UM, lower), fault=False)
+    diffusion_resistor(drawing, LEFT_AT_UM + step_x, lower)
+    plan.add(ties.net_with_two_names(drawing, LEFT_AT_UM, upper), fault=True)
+    plan.add(ties.name_on_two_nets(drawing, LEFT_AT_UM + step_x, upper), fault=True)
+    plan.add(ties.joined_name(drawing, LEFT_AT_UM + 3 * step_x, upper), fault=False)
+    plan.add(islands.distant_substrate_tap(drawing, 150.0, upper), fault=True)
+
+
+def join_rails(drawing: Drawing, y: float) -> None:
+    """Join the rails of a row of islands to the trunks."""
+    for name, (lower, upper) in RAILS_UM.items():
+        to_trunk(drawing, name, y + lower, y + upper)
+
+
+def cages(drawing: Drawing, plan: Plan) -> None:
+    """A row of cages on the pin DATA, which metal 4 joins."""
+    x, y = CAGES_AT_UM
+    for index, (draw, fault) in enumerate(CAGES):
+        left = x + rings.CAGE_STEP_UM * index
+        plan.add(draw(drawing, left, y), fault=fault)
+        if draw is rings.collector_on_ground:
+            plan.add(rings.collector_tie(left, y), fault=True)
+    for name, (lower, upper) in (("VDD", rings.CAGE_VDD_UM), ("VSS", rings.CAGE_VSS_UM)):
+        drawing.rect("metal2", x, y + lower, RAIL_END_UM, y + upper)
+        to_trunk(drawing, name, y + lower, y + upper)
+    mid_x, mid_y = x + rings.CENTRE_UM[0], y + rings.CENTRE_UM[1]
+    last = mid_x + rings.CAGE_STEP_UM * (len(CAGES) - 1)
+    drawing.rect("metal4", mid_x, mid_y - 1, last, mid_y + 1)
+    data = PIN_ISLANDS_AT_UM[0] + rings.CAGE_STEP_UM * UPPER_PADS.index("DATA") + 12
+    drawing.rect("metal4", data - 1, mid_y, data + 1, PAD_ROWS_UM[1] + 1)
+
+
+def pin_islands(drawing: Drawing, plan: Plan) -> None:
+    """The islands under the upper pads."""
+    x, y = PIN_ISLANDS_AT_UM
+    for index, (draw, fault) in enumerate(PIN_ISLANDS):
+        plan.add(draw(drawing, x + rings.CAGE_STEP_UM * index, y), fault=fault)
+    rails(drawing, x, RAIL_END_UM, y)
+    join_rails(drawing, y)
 
 
 def draw_block() -> tuple[gdstk.Library, tuple[Planted, ...], tuple[Planted, ...]]:
     """Draw the whole block; return its library, the faults and the near-misses."""
-    library = gdstk.Library("valve_driver", unit=1e-6, precision=1e-9)
-    number, datatype = LAYERS["contact"]
-    library.new_cell("contact").add(
-        gdstk.rectangle((0, 0), (CONTACT_UM, CONTACT_UM), layer=number, datatype=datatype)
-    )
+    library = new_library()
     drawing = Drawing(library, "valve_driver")
+    plan = Plan()
     drawing.ring("p", 0, 0, WIDTH_UM, HEIGHT_UM, width=2.0)
-    pads(drawing, ("VALVE0", "VALVE1", "VALVE2", "VALVE3", "VDD", "VSS", "CLOCK", "DATA"), 8)
-    pads(drawing, ("FLOW", "LEVEL", "SUPPLY", "VSS", "RESET", "ALARM", "TEST", "VDD"), 342)
-    driver = output_driver(library)
-    for index in range(4):
-        drawing.place(driver, 16 + 118 * index, 70)
-    logic(drawing, library, 20, 130)
-    sense_amplifier(drawing, 432, 290)
-    diffusion_resistor(drawing, 20, 285)
-    faults, near_misses = islands(drawing)
-    return library, faults, near_misses
+    pads(drawing, LOWER_PADS, PAD_ROWS_UM[0], 59.0)
+    pads(drawing, UPPER_PADS, PAD_ROWS_UM[1], 60.0)
+    drivers(drawing, library)
+    wall(drawing)
+    plan.add(clock_input(drawing, 488.0, 68.0), fault=False)
+    logic(drawing, library)
+    core_islands(drawing, plan)
+    cages(drawing, plan)
+    pin_islands(drawing, plan)
+    top = PIN_ISLANDS_AT_UM[1]
+    supplies(
+        drawing,
+        {name: (top + lower, top + upper) for name, (lower, upper) in RAILS_UM.items()},
+    )
+    return library, tuple(plan.faults), tuple(plan.near_misses)
 
 
 def main(path: Path) -> None:

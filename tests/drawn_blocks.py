@@ -113,6 +113,7 @@ def technology(*, derived: Mapping[str, str] | None = None, **roles: str | None)
         update={
             "layers": layers,
             "derived": dict(derived or {}),
+            "conductors": None,
             "roles": base.roles.model_copy(update={**plain, **roles}),
         }
     )

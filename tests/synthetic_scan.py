@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 import shapely
+from synthetic_connections import connections, injector_names
 
 from latchscan.caveats import Caveat
 from latchscan.layout.model import (
@@ -28,10 +29,11 @@ from latchscan.layout.model import (
     Spacings,
     Taps,
 )
+from latchscan.layout.unconnected import no_connections
 from latchscan.parasitics.model import Resistances, Transfers
 from latchscan.pnpn.model import Sites
-from latchscan.rules import judge
-from latchscan.rules.model import Evidence
+from latchscan.rules import RULES, judge
+from latchscan.rules.model import Evidence, Finding
 from latchscan.scan import Origin, Scan
 from latchscan.technology.model import Technology
 
@@ -40,6 +42,8 @@ PITCH_UM = 12.0
 CELL_UM = 5.0
 OHM_PER_UM = 60.0
 """Invented slope of every resistance over the tap distance."""
+ALL_OFF = {name.replace("-", "_"): {"severity": "off"} for name in RULES}
+"""Rules for `technology` that leaves every rule out."""
 
 
 def technology(**rules: dict[str, Any]) -> Technology:
@@ -52,9 +56,10 @@ def technology(**rules: dict[str, Any]) -> Technology:
         "injector-spacing": {"min_um": 8.0},
         "well-resistance": {"max_ohm": 1200.0},
         "loop-gain": {"max_gain": 0.8},
+        "well-spacing": {"min_um": 8.0},
     }
     for name, values in rules.items():
-        limits[name.replace("_", "-")].update(values)
+        limits.setdefault(name.replace("_", "-"), {}).update(values)
     return Technology.model_validate(
         {
             "format": "latchscan-technology",
@@ -114,11 +119,14 @@ def polygons(boxes: Any) -> Geometries:
     return column
 
 
-def evidence(*, rows: int = 6, cells: int = 24, tap_cell: int = 3) -> Evidence:
+def evidence(
+    *, rows: int = 6, cells: int = 24, tap_cell: int = 3, connected: bool = False
+) -> Evidence:
     """Rows of cells with a tap column at `tap_cell`; p+ above n+ in every other cell.
 
     Row 0's n+ emitters are injectors of pin ``drive``; row 1's well has no contact on its
-    tap; everything else is tied.
+    tap; everything else is tied.  `connected` adds what `synthetic_connections` describes;
+    without it nothing is known of nets, as under a technology that names no conductors.
     """
     columns = [cell for cell in range(cells) if cell != tap_cell]
     left = np.array([cell * CELL_UM for cell in columns])
@@ -127,6 +135,9 @@ def evidence(*, rows: int = 6, cells: int = 24, tap_cell: int = 3) -> Evidence:
     p_box = _cells(left, rows, 7.0)
     n_box = _cells(left, rows, 1.0)
     layout = _layout(rows, cells, tap_x, wells, p_box, n_box)
+    if connected:
+        named = dataclasses.replace(layout.emitters, injector=injector_names(layout))
+        layout = dataclasses.replace(layout, emitters=named)
     box = layout.emitters.box_um
     far_x = np.where(box[:, 0] > tap_x, box[:, 2], box[:, 0])
     near_x = np.where(box[:, 0] > tap_x, tap_x + 2.0, tap_x)
@@ -149,7 +160,7 @@ def evidence(*, rows: int = 6, cells: int = 24, tap_cell: int = 3) -> Evidence:
         ),
         spacings=Spacings(
             emitter=injectors,
-            body=np.zeros(len(injectors), dtype=np.int64),
+            body=np.where(layout.emitters.kind[injectors] == P_IN_NWELL, rows, 0),
             spacing_um=np.full(len(injectors), 3.0),
             from_um=box[injectors][:, (0, 3)],
             to_um=box[injectors][:, (0, 3)] + (0.0, 3.0),
@@ -165,6 +176,9 @@ def evidence(*, rows: int = 6, cells: int = 24, tap_cell: int = 3) -> Evidence:
             well_ohm=0.8 * full[pairs.anode], substrate_ohm=0.8 * full[pairs.cathode]
         ),
         sites=_sites(layout, pairs, full),
+        connections=connections(layout)
+        if connected
+        else no_connections(len(layout.bodies), len(layout.taps.kind)),
     )
 
 
@@ -301,8 +315,12 @@ def _sites(layout: Layout, pairs: Pairs, resistance: Any) -> Sites:
 
 
 def scan(of: Evidence | None = None, **names: str) -> Scan:
-    """A scan of `of` with its findings; `names` replaces texts of the origin."""
-    measured = evidence() if of is None else of
+    """A scan of `of` with its findings; `names` replaces texts of the origin.
+
+    Without `of` it is the connected block of `evidence`; ``scan(evidence())`` is the same
+    block of which no net is known.
+    """
+    measured = evidence(connected=True) if of is None else of
     texts = {
         "layout_name": "valve_driver.gds",
         "layout_sha256": "0" * 64,
@@ -332,3 +350,11 @@ def changed(measured: Evidence, part: str, **columns: Any) -> Evidence:
     inner = getattr(measured, first)
     new = changed(inner, rest, **columns) if rest else dataclasses.replace(inner, **columns)
     return dataclasses.replace(measured, **{first: new})
+
+
+def findings_of(rule: str, measured: Evidence, **limits: Any) -> tuple[Finding, ...]:
+    """Findings of one rule, with its limits replaced; untied bodies are reported as well."""
+    rules: dict[str, dict[str, Any]] = {**ALL_OFF, "untied_body": {"severity": "watch"}}
+    rules[rule.replace("-", "_")] = {"severity": "fail", **limits}
+    found = judge(measured, technology(**rules))
+    return tuple(one for one in found if one.rule == rule)

@@ -22,13 +22,18 @@ RANK = {
     "caveats": 0,
     "tasks": 0.5,
     "technology": 1,
+    "block": 1.5,
     "layout": 2,
     "fields": 2,
     "parasitics": 3,
     "pnpn": 4,
     "rules": 5,
+    "block_fit": 6,
+    "draft": 6,
     "scan": 6,
     "report": 7,
+    "cli_terminal": 7.3,
+    "cli_block": 7.6,
     "cli": 8,
     "__main__": 9,
 }
@@ -38,11 +43,11 @@ DOORS = {
     "gdstk": {"layout"},
     "rtree": {"layout"},
     "yaml": {"technology"},
-    "pydantic": {"technology"},
+    "pydantic": {"technology", "block"},
     "scipy": {"fields", "pnpn", "layout", "parasitics"},
     "shapely": {"layout", "parasitics", "pnpn", "rules", "report"},
-    "click": {"cli", "__main__"},
-    "tqdm": {"cli"},
+    "click": {"cli", "cli_block", "cli_terminal", "__main__"},
+    "tqdm": {"cli_terminal"},
 }
 """The only rooms that may import a third party."""
 

@@ -8,11 +8,13 @@ point of this shape is farthest from the nearest of those?) and share
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from itertools import pairwise
 
 import numpy as np
 import shapely
 
+from latchscan.layout.connections import Injectors, Rings
 from latchscan.layout.measure.farthest import Farthest, farthest_in_crowds, farthest_points
 from latchscan.layout.model import (
     N_OUTSIDE_NWELL,
@@ -33,6 +35,9 @@ TAP_REACH_STAGE = "tap reach"
 EMITTERS_PER_TASK = 20_000
 CONTACTS_PER_TASK = 10_000
 """Sizes of a task; fixed, so that results do not depend on the number of workers."""
+
+NO_COLLECTORS: Ints = np.zeros((0, 2), dtype=np.int64)
+NO_COLLECTORS.setflags(write=False)
 
 _Task = tuple[Geometries, Ints, Geometries, Ints]
 _TapTask = tuple[Geometries, Floats, Ints]
@@ -122,40 +127,74 @@ def _joined(parts: list[Farthest]) -> Farthest:
     )
 
 
-def measure_spacings(layout: Layout) -> Spacings:
+def own_collectors(layout: Layout, injectors: Injectors, rings: Rings) -> Ints:
+    """Wells that stand around an injector to collect what it emits, not to be fired by it.
+
+    Parameters
+    ----------
+    layout
+        Bodies and emitters.
+    injectors, rings
+        Guard wells are rings of the material ``nwell``.
+
+    Returns
+    -------
+    Ints
+        (k, 2) emitter and n-well body, sorted: the guard wells around each injector, and the
+        well around its isolated p-well where that well holds no p+ emitter.
+    """
+    emitters, bodies = layout.emitters, layout.bodies
+    polygons, owner = _wells(layout)
+    pairs = []
+    tree = shapely.STRtree(polygons)
+    for ring in np.flatnonzero(rings.material == "nwell").tolist():
+        wells = np.unique(owner[tree.query(rings.polygons[ring], predicate="covers")])
+        first, last = rings.member_first[ring], rings.member_first[ring + 1]
+        members = injectors.emitter[rings.member_injector[first:last]]
+        pairs += [(emitter, well) for emitter in members[members >= 0] for well in wells]
+    holds_anode = np.zeros(len(bodies), dtype=np.bool_)
+    holds_anode[emitters.body[emitters.kind == P_IN_NWELL]] = True
+    around = np.array([body.enclosing for body in bodies], dtype=np.int64)[emitters.body]
+    inside = np.flatnonzero((emitters.injector != "") & (around >= 0))
+    inside = inside[~holds_anode[around[inside]]]
+    pairs += list(zip(inside.tolist(), around[inside].tolist(), strict=True))
+    return np.asarray(np.unique(np.array(pairs, dtype=np.int64).reshape(-1, 2), axis=0))
+
+
+def measure_spacings(layout: Layout, collectors: Ints = NO_COLLECTORS) -> Spacings:
     """Distance of every injector from the nearest other half of a thyristor.
 
     Parameters
     ----------
     layout
         Bodies and emitters; an injector is an emitter with a name in `injector`.
+    collectors
+        (k, 2) n+ emitters and n-well bodies that are no target for them, as
+        `own_collectors` gives them.
 
     Returns
     -------
     Spacings
-        For an n+ injector to the nearest drawn n-well polygon of any body, for a p+ injector
-        to the nearest n+ emitter outside wells; one row for each injector, in the emitters'
-        order, with the ends of the shortest line.
+        For an n+ injector to the nearest drawn n-well polygon of any other body, for a p+
+        injector to the nearest n+ emitter outside wells; one row for each injector, in the
+        emitters' order, with the ends of the shortest line.
     """
     emitters = layout.emitters
     injectors = np.flatnonzero(emitters.injector != "")
-    wells = [(i, body.polygons) for i, body in enumerate(layout.bodies) if body.kind == "nwell"]
-    well_polygons = np.concatenate([np.empty(0, dtype=object), *(p for _, p in wells)])
-    well_body = np.repeat(
-        np.array([i for i, _ in wells], dtype=np.int64),
-        np.array([len(p) for _, p in wells], dtype=np.int64),
-    )
+    wells = _wells(layout)
     n_plus = np.flatnonzero(emitters.kind == N_OUTSIDE_NWELL)
-    opposite: dict[int, tuple[Geometries, Ints]] = {
-        N_OUTSIDE_NWELL: (well_polygons, well_body),
-        P_IN_NWELL: (emitters.polygons[n_plus], emitters.body[n_plus]),
-    }
+    diffusions = (emitters.polygons[n_plus], emitters.body[n_plus])
     body = np.full(len(injectors), -1, dtype=np.int64)
     spacing = np.full(len(injectors), np.nan)
     ends = np.full((len(injectors), 2, 2), np.nan)
-    for kind, (polygons, owner) in opposite.items():
-        rows = np.flatnonzero(emitters.kind[injectors] == kind)
-        if len(rows) and len(polygons):
+    for rows, ignored in _with_equal_targets(injectors, emitters.kind, collectors):
+        polygons, owner = wells
+        if emitters.kind[injectors[rows[0]]] == P_IN_NWELL:
+            polygons, owner = diffusions
+        elif ignored:
+            other = ~np.isin(owner, ignored)
+            polygons, owner = polygons[other], owner[other]
+        if len(polygons):
             target, ends[rows] = _shortest(emitters.polygons[injectors[rows]], polygons)
             body[rows] = owner[target]
             spacing[rows] = np.hypot(*(ends[rows, 1] - ends[rows, 0]).T)
@@ -166,6 +205,32 @@ def measure_spacings(layout: Layout) -> Spacings:
         from_um=frozen(ends[:, 0].copy()),
         to_um=frozen(ends[:, 1].copy()),
     )
+
+
+def _wells(layout: Layout) -> tuple[Geometries, Ints]:
+    """All n-well polygons and the body of each."""
+    wells = [(i, body.polygons) for i, body in enumerate(layout.bodies) if body.kind == "nwell"]
+    polygons = np.concatenate([np.empty(0, dtype=object), *(p for _, p in wells)])
+    owner = np.repeat(
+        np.array([i for i, _ in wells], dtype=np.int64),
+        np.array([len(p) for _, p in wells], dtype=np.int64),
+    )
+    return polygons, owner
+
+
+def _with_equal_targets(
+    injectors: Ints, kind: Ints, collectors: Ints
+) -> Iterator[tuple[Ints, tuple[int, ...]]]:
+    """Rows of injectors of one kind that leave out the same bodies, and these bodies."""
+    ignored: dict[int, list[int]] = {}
+    for emitter, well in collectors.tolist():
+        ignored.setdefault(emitter, []).append(well)
+    groups: dict[tuple[int, tuple[int, ...]], list[int]] = {}
+    for row, emitter in enumerate(injectors.tolist()):
+        key = (int(kind[emitter]), tuple(sorted(ignored.get(emitter, ()))))
+        groups.setdefault(key, []).append(row)
+    for (_, wells), rows in groups.items():
+        yield np.array(rows, dtype=np.int64), wells
 
 
 def _shortest(sources: Geometries, targets: Geometries) -> tuple[Ints, Floats]:

@@ -27,7 +27,7 @@ from latchscan.layout.model import (
     Taps,
     frozen,
 )
-from latchscan.technology.model import Labels, Technology
+from latchscan.technology.model import Technology
 
 MARKED = "marker"
 """Name of an injector that only a marker layer declares."""
@@ -99,7 +99,7 @@ def gather_emitters(regions: Regions, technology: Technology, members: Members) 
         over_buried=frozen(
             _covered_area(polygons, regions.shapes["buried"]) > 0.5 * shapely.area(polygons)
         ),
-        injector=_injectors(regions, technology.labels, polygons),
+        injector=_injectors(regions, technology, polygons),
     )
 
 
@@ -231,18 +231,26 @@ def _covered_area(polygons: Geometries, cover: Geometries) -> Floats:
     return area
 
 
-def _injectors(regions: Regions, labels: Labels, polygons: Geometries) -> NDArray[np.str_]:
-    """(n,) why an emitter is an injector: a pin's name or `MARKED`, "" where it is none."""
+def _injectors(regions: Regions, technology: Technology, polygons: Geometries) -> NDArray[np.str_]:
+    """(n,) why an emitter is an injector: a pin's name or `MARKED`, "" where it is none.
+
+    Where the technology names its conductors, pins are followed through their nets later and
+    a label above an emitter means nothing.
+    """
+    labels = technology.labels
     names = [""] * len(polygons)
     marked = _covered_area(polygons, regions.shapes["injector"]) > LEAST_AREA_UM2
     for row in np.flatnonzero(marked).tolist():
         names[row] = MARKED
-    supplies = [pattern.lower() for pattern in (*labels.power_names, *labels.ground_names)]
+    if technology.conductors is not None:
+        return _texts(names)
+    no_pins = (*labels.power_names, *labels.ground_names, *labels.remark_names)
+    patterns = [pattern.lower() for pattern in no_pins]
     pins = [
         label
         for label in regions.labels
         if label.text
-        and not any(fnmatch.fnmatchcase(label.text.lower(), pattern) for pattern in supplies)
+        and not any(fnmatch.fnmatchcase(label.text.lower(), pattern) for pattern in patterns)
     ]
     if pins and len(polygons):
         points = shapely.points([(label.x_um, label.y_um) for label in pins])

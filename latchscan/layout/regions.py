@@ -1,9 +1,9 @@
 """Regions of the block: wells, taps, diffusions, merged and exact.
 
-In: an opened layout and a technology.  Out: `Regions`.  The block is cut into tiles, the
-tiles into windows (`tiles.py`); the technology's expressions run in each window
-(`evaluation.py`); what meets on a seam is joined (`stitching.py`).  The result does not
-depend on the sizes of tiles and windows, nor on the number of workers.
+In: an opened layout and a technology.  Out: `Regions`, or the polygons of any expressions.
+The block is cut into tiles, the tiles into windows (`tiles.py`); the expressions run in each
+window (`evaluation.py`); what meets on a seam is joined (`stitching.py`).  The result does
+not depend on the sizes of tiles and windows, nor on the number of workers.
 """
 
 from __future__ import annotations
@@ -17,7 +17,13 @@ import shapely
 
 from latchscan.errors import LayoutError, OptionError
 from latchscan.layout.derive.contacts import distinct_boxes, merged_across, merged_boxes
-from latchscan.layout.derive.derivation import DRAWN_REGIONS, TAPS, Program, compile_program
+from latchscan.layout.derive.derivation import (
+    DRAWN_REGIONS,
+    TAPS,
+    Program,
+    compile_expressions,
+    compile_program,
+)
 from latchscan.layout.derive.geometry import SUBGRID, rings_to_polygons
 from latchscan.layout.derive.stitching import Rings, join_rings, select_rings, sort_rings, stitch
 from latchscan.layout.derive.tiles import Pair, TileResult, TileTask, derive_tiles
@@ -99,14 +105,12 @@ def derive_regions(
         If the block holds nothing on any layer that the roles use, or is too large.
     """
     program = compile_program(technology)
-    block = _analysed_box(source, window_um)
-    layers = _used_layers(program, technology)
+    block = analysed_box(source, window_um)
+    tasks = _tasks(source, program, technology, block, sizes or Sizes())
     if window_um is None:
         names = {*program.layers(wide=False), *program.layers(wide=True)}
-        _require_bearable(source, [layers[name] for name in sorted(names)])
-    tasks = _tasks(source, program, layers, block, sizes or Sizes())
-    batches = workers.map("regions", derive_tiles, tasks)
-    results = [result for batch in batches for result in batch]
+        require_bearable(source, [tasks[0].layers[name] for name in sorted(names)])
+    results = _derived(tasks, workers, "regions")
     if not any(result.shape_count for result in results):
         raise _nothing_found(source, window_um)
     unit = source.database_unit_um
@@ -121,6 +125,59 @@ def derive_regions(
         contact_box_um=frozen(_tap_contacts(results, shapes, unit, lines)),
         labels=_labels_inside(source, label_pairs, _to_um(block, unit)),
     )
+
+
+def derive_expressions(
+    source: LayoutSource,
+    technology: Technology,
+    expressions: Mapping[str, str],
+    workers: Workers,
+    *,
+    sizes: Sizes | None = None,
+) -> dict[str, Geometries]:
+    """Merged polygons [um] of any expressions over the whole block.
+
+    Parameters
+    ----------
+    source
+        The opened layout.
+    technology
+        Names the layers and derived names that the expressions use.
+    expressions
+        Name -> text of an expression, for example ``active and not poly``.
+    workers
+        Where the tiles run.
+    sizes
+        Sizes of tiles and windows; they change nothing but the time.
+
+    Returns
+    -------
+    dict
+        Name -> disjoint polygons sorted by (y0, x0), as the regions are; none where the
+        expression holds nothing.
+
+    Raises
+    ------
+    LayoutError
+        If the block is too large.
+    """
+    if not expressions:
+        return {}
+    program = compile_expressions(technology, expressions)
+    block = analysed_box(source, None)
+    tasks = _tasks(source, program, technology, block, sizes or Sizes())
+    require_bearable(source, [pairs for _, pairs in sorted(tasks[0].layers.items())])
+    results = _derived(tasks, workers, "conductors")
+    lines = _seams(tasks, block)
+    return {
+        name: rings_to_polygons(_joined(results, name, lines), source.database_unit_um)
+        for name in expressions
+    }
+
+
+def _derived(tasks: list[TileTask], workers: Workers, stage: str) -> list[TileResult]:
+    batches = workers.map(stage, derive_tiles, tasks)
+    return [result for batch in batches for result in batch]
 
 
 def region_statistics(regions: Regions) -> dict[str, RegionStatistics]:
@@ -144,10 +201,17 @@ def _to_um(box: BoxDbu, unit_um: float) -> Box:
     return (x0, y0, x1, y1)
 
 
-def _require_bearable(source: LayoutSource, layers: Iterable[tuple[Pair, ...]]) -> None:
+def is_bearable(source: LayoutSource, layers: Iterable[tuple[Pair, ...]]) -> bool:
+    """Whether the polygons on these layers are few enough to be worked off."""
+    pairs = [pair for pairs in layers for pair in pairs]
+    return source.total_polygons(pairs) <= MOST_POLYGONS
+
+
+def require_bearable(source: LayoutSource, layers: Iterable[tuple[Pair, ...]]) -> None:
     """Refuse what could not be worked off before any work is done."""
-    count = source.total_polygons([pair for pairs in layers for pair in pairs])
-    if count > MOST_POLYGONS:
+    layers = list(layers)
+    if not is_bearable(source, layers):
+        count = source.total_polygons([pair for pairs in layers for pair in pairs])
         raise LayoutError(
             f"{source.name}: cell {source.top} holds {count} polygons on the layers of its"
             f" regions; expected at most {MOST_POLYGONS}",
@@ -155,7 +219,16 @@ def _require_bearable(source: LayoutSource, layers: Iterable[tuple[Pair, ...]]) 
         )
 
 
-def _analysed_box(source: LayoutSource, window_um: Box | None) -> BoxDbu:
+def analysed_box(source: LayoutSource, window_um: Box | None) -> BoxDbu:
+    """The block's box, or the part of it in a window [database units].
+
+    Raises
+    ------
+    OptionError
+        If the window does not meet the block.
+    LayoutError
+        If the block is too large.
+    """
     block = source.bbox_dbu
     width, height = block[2] - block[0], block[3] - block[1]
     if max(width, height) > LARGEST_BLOCK_DBU:
@@ -198,16 +271,17 @@ def _used_layers(program: Program, technology: Technology) -> dict[str, tuple[Pa
 def _tasks(
     source: LayoutSource,
     program: Program,
-    layers: Mapping[str, tuple[Pair, ...]],
+    technology: Technology,
     block: BoxDbu,
     sizes: Sizes,
 ) -> list[TileTask]:
+    layers = _used_layers(program, technology)
     unit = source.database_unit_um
     pitch = source.repeat_pitch_dbu()
     if pitch is not None and max(pitch) * unit > LARGEST_PITCH_UM:
         pitch = None
     x_cuts, y_cuts = (
-        _cuts(block[i], block[i + 2], sizes.tile_um, unit, (pitch or (1, 1))[i]) for i in (0, 1)
+        tile_cuts(block[i], block[i + 2], sizes.tile_um, unit, (pitch or (1, 1))[i]) for i in (0, 1)
     )
     window = None
     if sizes.window_um is not None:
@@ -228,7 +302,9 @@ def _tasks(
     ]
 
 
-def _cuts(low: int, high: int, tile_um: float | None, unit_um: float, pitch_dbu: int) -> list[int]:
+def tile_cuts(
+    low: int, high: int, tile_um: float | None, unit_um: float, pitch_dbu: int
+) -> list[int]:
     """Edges of the tiles along one axis [database units], whole pitches apart."""
     side = tile_um
     if side is None:

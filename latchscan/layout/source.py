@@ -18,9 +18,9 @@ from latchscan.layout.file.guard import file_sha256, read_layout
 from latchscan.layout.file.hierarchy import parents_first, polygon_counts
 from latchscan.layout.file.library import Library
 from latchscan.layout.file.pitch import repeat_pitch
-from latchscan.layout.file.placements import all_placements
+from latchscan.layout.file.placements import placed_texts
 from latchscan.layout.file.settling import bounding_box, choose_top, layer_notes, refuse_missing
-from latchscan.layout.file.tables import Pair
+from latchscan.layout.file.tables import Pair, load_tables
 from latchscan.layout.file.walk import PolygonColumns
 from latchscan.layout.model import Box, Ints, Label
 from latchscan.technology.model import Technology
@@ -91,26 +91,20 @@ class LayoutSource:
     def labels(self, pairs: Iterable[Pair]) -> tuple[Label, ...]:
         """Texts of the whole hierarchy on these layer/texttype pairs, sorted by (y, x, text)."""
         library = self._library
+        x, y, row = placed_texts(library.tables, library.order, library.top, set(pairs))
         tables = library.tables
-        wanted = set(pairs)
-        chosen = [pair in wanted for pair in tables.pairs]
-        found: list[tuple[float, float, str, Pair]] = []
-        rows = np.flatnonzero(np.array(chosen, dtype=np.bool_)[tables.label_pair])
-        cells = set(tables.label_cell[rows].tolist())
-        placements = all_placements(tables, top=library.top, order=library.order, cells=cells)
-        for row in rows.tolist():
-            if int(tables.label_cell[row]) not in placements:
-                continue
-            pair = tables.pairs[tables.label_pair[row]]
-            copies = placements[int(tables.label_cell[row])]
-            x, y = tables.label_points[row]
-            a, b, c, d = copies.matrix.T
-            points = np.stack([a * x + b * y, c * x + d * y], axis=1) + copies.shift
-            for px, py in (np.floor(points + 0.5) * self.database_unit_um).tolist():
-                found.append((_clean(py), _clean(px), tables.label_texts[row], pair))
+        unit = self.database_unit_um
+        names = [tables.pairs[pair] for pair in tables.label_pair[row].tolist()]
+        places = zip((x * unit).tolist(), (y * unit).tolist(), row.tolist(), names, strict=True)
         return tuple(
-            Label(text=text, layer=pair[0], texttype=pair[1], x_um=x, y_um=y)
-            for y, x, text, pair in sorted(found)
+            Label(
+                text=tables.label_texts[text],
+                layer=layer,
+                texttype=texttype,
+                x_um=_clean(x_um),
+                y_um=_clean(y_um),
+            )
+            for x_um, y_um, text, (layer, texttype) in places
         )
 
     def total_polygons(self, pairs: Iterable[Pair]) -> int:
@@ -153,10 +147,11 @@ def open_layout(
         name: tuple(_pair(text) for text in layer.gds) for name, layer in technology.layers.items()
     }
     shape_pairs = sorted({pair for pairs in named.values() for pair in pairs})
-    label_pairs = {_pair(text) for text in technology.labels.layers}
-    tables = read_layout(
+    label_pairs = {_pair(text) for text in technology.text_layers()}
+    folder = read_layout(
         path, shape_pairs=shape_pairs, text_pairs=sorted(label_pairs.union(shape_pairs))
     )
+    tables = load_tables(folder.path)
     order = parents_first(tables, str(path))
     index, notes = choose_top(path, tables, order, top, shape_pairs)
     refuse_missing(path, tables, index)
@@ -169,7 +164,7 @@ def open_layout(
         bbox_dbu=bounding_box(path, tables, order, index),
         database_unit_um=_clean(tables.database_unit_um),
         notes=tuple(notes),
-        _library=Library(tables, order=order, top=index),
+        _library=Library(tables, order=order, top=index, folder=folder),
     )
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 from latchscan.layout.model import Box
@@ -47,6 +48,15 @@ class Frame:
     def y(self, y_um: float) -> float:
         """Page y of a layout y."""
         return self.top + (self.box_um[3] - y_um) * self.scale
+
+
+def page_box(frame: Frame, box_um: Iterable[float], smallest: float = 0.0) -> Box:
+    """Page rectangle of a layout box, grown around its middle to at least `smallest`."""
+    x0, y0, x1, y1 = box_um
+    middle_x, middle_y = (frame.x(x0) + frame.x(x1)) / 2, (frame.y(y0) + frame.y(y1)) / 2
+    half_x = max((x1 - x0) * frame.scale, smallest) / 2
+    half_y = max((y1 - y0) * frame.scale, smallest) / 2
+    return (middle_x - half_x, middle_y - half_y, middle_x + half_x, middle_y + half_y)
 
 
 def fit(box_um: Box, area: Box) -> Frame:

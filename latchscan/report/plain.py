@@ -49,6 +49,8 @@ def measure(value: float, unit: str) -> str:
     --------
     >>> measure(1234.56, "ohm"), measure(0.51234, "1"), measure(float("nan"), "um")
     ('1235 ohm', '0.5123', 'not known')
+    >>> measure(1.62, "V"), measure(-0.3, "V")
+    ('1.62 V', '-0.3 V')
     """
     if math.isnan(value):
         return "not known"

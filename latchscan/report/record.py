@@ -8,7 +8,6 @@ of the scan: wells by (y, x), sites and findings worst first.
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable
 from typing import Any
 
 import numpy as np
@@ -17,15 +16,15 @@ import shapely
 from latchscan import __version__
 from latchscan.layout.model import Floats, Ints, Layout
 from latchscan.layout.regions import region_statistics
-from latchscan.report.plain import plain_text, significant
+from latchscan.report.digits import box, drawn, solved
+from latchscan.report.plain import plain_text
+from latchscan.report.record_connections import connection_records
 from latchscan.rules.model import Evidence, Finding
-from latchscan.scan import Scan
+from latchscan.scan import Origin, Scan
 
 FORMAT = "latchscan-scan"
 FORMAT_VERSION = 1
 LARGEST_SITE_COUNT = 1000
-DRAWN_DIGITS = 9
-SOLVED_DIGITS = 6
 
 Record = dict[str, Any]
 
@@ -47,20 +46,22 @@ def scan_record(scan: Scan) -> Record:
             "file_name": plain_text(origin.layout_name),
             "sha256": origin.layout_sha256,
             "top": plain_text(origin.top),
-            "bbox_um": _box(origin.bbox_um),
-            "database_unit_um": _drawn(origin.database_unit_um),
+            "bbox_um": box(origin.bbox_um),
+            "database_unit_um": drawn(origin.database_unit_um),
         },
         "technology": {
             "name": plain_text(origin.technology_name),
             "sha256": origin.technology_sha256,
         },
-        "temperature_c": _drawn(origin.temperature_c),
+        "block": _block(origin),
+        "temperature_c": drawn(origin.temperature_c),
         "loop": {
-            "supply_v": _drawn(origin.supply_v),
-            "probe_current_a": _drawn(origin.probe_current_a),
+            "supply_v": drawn(origin.supply_v),
+            "probe_current_a": drawn(origin.probe_current_a),
         },
         "regions": _regions(evidence.layout),
         "wells": _wells(evidence),
+        **connection_records(evidence),
         "sites": _sites(evidence),
         "findings": [_finding(finding) for finding in scan.findings],
         "caveats": [
@@ -74,22 +75,17 @@ def scan_record(scan: Scan) -> Record:
     }
 
 
-def _drawn(value: float) -> float | None:
-    return significant(float(value), DRAWN_DIGITS)
-
-
-def _solved(value: float) -> float | None:
-    return significant(float(value), SOLVED_DIGITS)
-
-
-def _box(box_um: Iterable[float]) -> list[float | None]:
-    return [_drawn(value) for value in box_um]
+def _block(origin: Origin) -> Record | None:
+    """The block file, None where there is none."""
+    if not origin.block_name:
+        return None
+    return {"file_name": plain_text(origin.block_name), "sha256": origin.block_sha256}
 
 
 def _regions(layout: Layout) -> Record:
     """Count and area of each region that reports list."""
     return {
-        name: {"count": one.count, "area_um2": _drawn(one.area_um2)}
+        name: {"count": one.count, "area_um2": drawn(one.area_um2)}
         for name, one in region_statistics(layout.regions).items()
     }
 
@@ -114,14 +110,14 @@ def _wells(evidence: Evidence) -> list[Record]:
         records.append(
             {
                 "id": body.id,
-                "bbox_um": _box(shapely.total_bounds(body.polygons)),
+                "bbox_um": box(shapely.total_bounds(body.polygons)),
                 "tap_count": int(tap_count[index]),
                 "emitter_count": len(rows),
                 "worst_tap_distance_um": None
                 if farthest is None
-                else _drawn(distances.tap_distance_um[rows[farthest]]),
-                "worst_tap_distance_at_um": None if at is None else [_drawn(at[0]), _drawn(at[1])],
-                "worst_well_resistance_ohm": None if worst is None else _solved(resistances[worst]),
+                else drawn(distances.tap_distance_um[rows[farthest]]),
+                "worst_tap_distance_at_um": None if at is None else [drawn(at[0]), drawn(at[1])],
+                "worst_well_resistance_ohm": None if worst is None else solved(resistances[worst]),
             }
         )
     return records
@@ -149,20 +145,20 @@ def _sites(evidence: Evidence) -> list[Record]:
             "id": str(sites.ids[row]),
             "anode": sources[pairs.anode[sites.pair[row]]],
             "cathode": sources[pairs.cathode[sites.pair[row]]],
-            "x_um": _drawn(sites.x_um[row]),
-            "y_um": _drawn(sites.y_um[row]),
-            "well_resistance_ohm": _solved(sites.well_resistance_ohm[row]),
-            "substrate_resistance_ohm": _solved(sites.substrate_resistance_ohm[row]),
-            "well_transfer_ohm": _solved(sites.well_transfer_ohm[row]),
-            "substrate_transfer_ohm": _solved(sites.substrate_transfer_ohm[row]),
+            "x_um": drawn(sites.x_um[row]),
+            "y_um": drawn(sites.y_um[row]),
+            "well_resistance_ohm": solved(sites.well_resistance_ohm[row]),
+            "substrate_resistance_ohm": solved(sites.substrate_resistance_ohm[row]),
+            "well_transfer_ohm": solved(sites.well_transfer_ohm[row]),
+            "substrate_transfer_ohm": solved(sites.substrate_transfer_ohm[row]),
             "judged_as": "patch" if sites.patch[row] else "single",
-            "beta_pnp": _solved(sites.beta_pnp[row]),
-            "beta_npn": _solved(sites.beta_npn[row]),
-            "loop_gain_ceiling": _solved(sites.loop_gain_ceiling[row]),
-            "loop_gain": _solved(sites.loop_gain[row]),
-            "trigger_current_a": _solved(sites.trigger_current_a[row]),
-            "trigger_well_a": _solved(sites.trigger_well_a[row]),
-            "trigger_substrate_a": _solved(sites.trigger_substrate_a[row]),
+            "beta_pnp": solved(sites.beta_pnp[row]),
+            "beta_npn": solved(sites.beta_npn[row]),
+            "loop_gain_ceiling": solved(sites.loop_gain_ceiling[row]),
+            "loop_gain": solved(sites.loop_gain[row]),
+            "trigger_current_a": solved(sites.trigger_current_a[row]),
+            "trigger_well_a": solved(sites.trigger_well_a[row]),
+            "trigger_substrate_a": solved(sites.trigger_substrate_a[row]),
         }
         for row in range(min(len(sites.ids), LARGEST_SITE_COUNT))
     ]
@@ -175,12 +171,12 @@ def _finding(finding: Finding) -> Record:
         "severity": finding.severity,
         "subject": finding.subject,
         "body": finding.body,
-        "x_um": _drawn(finding.x_um),
-        "y_um": _drawn(finding.y_um),
-        "measured": _solved(finding.measured),
-        "limit": _solved(finding.limit),
+        "x_um": drawn(finding.x_um),
+        "y_um": drawn(finding.y_um),
+        "measured": solved(finding.measured),
+        "limit": solved(finding.limit),
         "unit": finding.unit,
         "count": finding.count,
-        "box_um": _box(finding.box_um),
+        "box_um": box(finding.box_um),
         "message": plain_text(finding.message, longest=1000),
     }

@@ -10,11 +10,16 @@ import numpy as np
 
 from latchscan.caveats import SENTENCES, Caveat
 from latchscan.report.plain import current, measure, plain_text
+from latchscan.report.summary_connections import connection_lines
 from latchscan.rules.model import Evidence, Finding
 from latchscan.scan import Scan
 
 COLUMNS = 80
 WORST_COUNT = 5
+TOLD_ONE_BY_ONE = {"label-on-nothing", "pad-on-nothing", "unnamed-pad", "left-out"}
+"""Cautions whose every place is told: each asks for a look at the layout or the block file."""
+TOLD_COUNT = 9
+"""Places told; eight and one line for all others."""
 Paint = Callable[[str, str], str]
 """Gives a text the look of a severity (``fail``, ``watch``, ``good``); may leave it as it is."""
 
@@ -41,6 +46,12 @@ def _lines(scan: Scan, files: tuple[Path, ...], paint: Paint) -> Iterator[str]:
         f" {int(np.sum(layout.taps.contact_count > 0))} contacted taps,"
         f" {len(scan.evidence.sites.ids)} sites"
     )
+    known = list(connection_lines(scan.evidence))
+    if known:
+        yield ""
+        yield "Connections"
+        for heading, words in known:
+            yield from textwrap.wrap(f"  {heading:<11}{words}", COLUMNS, subsequent_indent=" " * 13)
     yield ""
     yield from _site_lines(scan.evidence)
     yield ""
@@ -60,9 +71,23 @@ def _note_lines(caveats: tuple[Caveat, ...]) -> Iterator[str]:
         kinds.setdefault(caveat.code, []).append(caveat)
     kinds.pop("estimate", None)
     for code, members in kinds.items():
+        if code in TOLD_ONE_BY_ONE and members[0].detail:
+            yield from _told_lines(code, [member.detail for member in members])
+            continue
         many = f"{SENTENCES[code]} ({len(members)} times; scan.json lists them)"
         sentence = members[0].sentence if len(members) == 1 else many
         yield from _wrapped(f"Note: {plain_text(sentence, 400)}.", "  ")
+
+
+def _told_lines(code: str, details: list[str]) -> Iterator[str]:
+    """A caution with a line for each place it concerns, as many as a screen bears."""
+    yield from _wrapped(f"Note: {SENTENCES[code]}:", "  ")
+    for detail in details[:TOLD_COUNT]:
+        yield from textwrap.wrap(
+            plain_text(detail, 300), COLUMNS, initial_indent="  - ", subsequent_indent="    "
+        )
+    if len(details) > TOLD_COUNT:
+        yield f"    and {len(details) - TOLD_COUNT} more in scan.json"
 
 
 def _wrapped(text: str, indent: str = "") -> list[str]:

@@ -1,8 +1,8 @@
 """The picture (``heatmap.svg``): one self-contained still image of the block and its risk.
 
 From the bottom to the top: wells, diffusions, taps, the field of loop gain, the line around
-everything that can latch, injectors, worst sites, findings.  Nothing in it depends on the
-network, a script or an installed font.
+everything that can latch, rings, findings, openings of rings, injectors, worst sites, pins.
+Nothing in it depends on the network, a script or an installed font.
 """
 
 from __future__ import annotations
@@ -30,11 +30,14 @@ from latchscan.report.palette import (
 )
 from latchscan.report.placing import Places
 from latchscan.report.plain import plain_text
-from latchscan.report.svg_marks import add_findings, add_injectors, add_sites, site_boxes
+from latchscan.report.svg_injectors import add_injectors
+from latchscan.report.svg_marks import add_findings, add_sites, site_boxes
 from latchscan.report.svg_panel import WIDTH as PANEL_WIDTH
 from latchscan.report.svg_panel import add_panel
 from latchscan.report.svg_parts import add, add_text, add_title, number, shortened
-from latchscan.report.svg_paths import NM_PER_UM, path_data
+from latchscan.report.svg_paths import nm_transform, nm_width, path_data
+from latchscan.report.svg_pins import add_pins, place_pins
+from latchscan.report.svg_rings import add_openings, add_rings, gap_boxes
 from latchscan.scan import Scan
 
 PAGE_WIDTH = 1240.0
@@ -93,29 +96,28 @@ def _add_map(root: Element, scan: Scan, frame: Frame, field: Field) -> None:
     inside = add(root, "g", id="map", clip_path="url(#map-frame)")
     _add_shapes(inside, scan, frame)
     _add_field(inside, frame, field)
+    add_rings(inside, scan.evidence, frame)
     add(root, "rect", **edge, fill="none", stroke=FAINT_INK, stroke_width=0.8)
     _add_scale_bar(root, frame)
     area = (frame.left, frame.top, frame.left + frame.width, frame.top + frame.height)
     places = Places(
         area=(area[0] - 8, area[1] - 8, area[2] + 8, area[3] + 8),
-        # no number may hide a site's mark
-        taken=site_boxes(scan.evidence, frame),
+        # no number may hide the mark of a site or of a ring's opening
+        taken=site_boxes(scan.evidence, frame) + gap_boxes(scan.evidence, frame),
     )
+    pins = place_pins(scan.evidence, frame, places)
     add_findings(root, scan.findings, frame, places)
+    add_openings(root, scan.evidence, frame)
     add_injectors(root, scan.evidence, frame, places)
     add_sites(root, scan.evidence, frame, places)
+    add_pins(root, scan.evidence, frame, pins)
 
 
 def _add_shapes(parent: Element, scan: Scan, frame: Frame) -> None:
     """Wells, diffusions and taps, one path each, in nm from the lower left corner."""
-    step = frame.scale / NM_PER_UM
-    place = (
-        f"matrix({step!r} 0 0 {-step!r} {number(frame.left)} {number(frame.top + frame.height)})"
-    )
-    group = add(parent, "g", id="shapes", transform=place, fill_rule="evenodd")
+    group = add(parent, "g", id="shapes", transform=nm_transform(frame), fill_rule="evenodd")
     shapes = scan.evidence.layout.regions.shapes
     taps: Geometries = np.concatenate((shapes["well_tap"], shapes["substrate_tap"]))
-    line = 0.5 / step
     for name, columns, fill, edge in (
         ("nwell", shapes["nwell"], WELL_FILL, WELL_EDGE),
         ("p-diffusion", shapes["p_diffusion_in_nwell"], P_FILL, ""),
@@ -125,7 +127,7 @@ def _add_shapes(parent: Element, scan: Scan, frame: Frame) -> None:
         path = add(group, "path", id=name, d=path_data(columns, frame), fill=fill)
         if edge:
             path.set("stroke", edge)
-            path.set("stroke-width", number(line))
+            path.set("stroke-width", nm_width(frame, 0.5))
 
 
 def _add_field(parent: Element, frame: Frame, field: Field) -> None:

@@ -1,97 +1,33 @@
-"""What is pointed out on the map: injectors, the worst sites, the numbered findings."""
+"""What is pointed out on the map: the worst sites, the numbered findings."""
 
 from __future__ import annotations
 
-from collections.abc import Iterable
 from xml.etree.ElementTree import Element
 
 import numpy as np
-import shapely
 
 from latchscan.layout.model import Box
-from latchscan.report.frame import Frame
-from latchscan.report.palette import FAIL_INK, INJECTOR_INK, INK, PAPER, WATCH_INK
+from latchscan.report.frame import Frame, page_box
+from latchscan.report.palette import FAIL_INK, INK, PAPER, WATCH_INK
 from latchscan.report.placing import Places
-from latchscan.report.plain import current, measure, plain_text
-from latchscan.report.svg_parts import add, add_text, add_title, number, text_width
+from latchscan.report.plain import current, measure
+from latchscan.report.svg_parts import (
+    add,
+    add_haloed,
+    add_text,
+    add_title,
+    number,
+    text_width,
+)
 from latchscan.rules.model import Evidence, Finding
 
 LARGEST_FINDING_COUNT = 200
-LARGEST_INJECTOR_NAMES = 60
-_SMALLEST_INJECTOR = 3.0
-_CLOSED_GAP = 6.0
 MARKED_SITE_COUNT = 10
 SITE_LETTERS = "ABCDEFGHIJ"
 _BADGE = 15.0
 _SMALLEST_OUTLINE = 9.0
 _DIAMOND = 5.0
 _SITE_GAP = 16.0
-
-
-def page_box(frame: Frame, box_um: Iterable[float], smallest: float = 0.0) -> Box:
-    """Page rectangle of a layout box, grown around its middle to at least `smallest`."""
-    x0, y0, x1, y1 = box_um
-    middle_x, middle_y = (frame.x(x0) + frame.x(x1)) / 2, (frame.y(y0) + frame.y(y1)) / 2
-    half_x = max((x1 - x0) * frame.scale, smallest) / 2
-    half_y = max((y1 - y0) * frame.scale, smallest) / 2
-    return (middle_x - half_x, middle_y - half_y, middle_x + half_x, middle_y + half_y)
-
-
-def add_injectors(parent: Element, evidence: Evidence, frame: Frame, places: Places) -> None:
-    """Outline every injector and name each pin once."""
-    emitters = evidence.layout.emitters
-    group = add(parent, "g", id="injectors", fill="none", stroke=INJECTOR_INK)
-    names = [name for name in np.unique(emitters.injector).tolist() if name]
-    for name in names:
-        rows = np.flatnonzero(emitters.injector == name)
-        boxes = [page_box(frame, emitters.box_um[row], _SMALLEST_INJECTOR) for row in rows]
-        member = add(group, "g", class_="injector")
-        noun = "emitter" if len(rows) == 1 else "emitters"
-        add_title(member, f"Injector {plain_text(name)}: {len(rows)} {noun} that it can bias")
-        outline = _joined_outline(boxes)
-        add(member, "path", d=outline, stroke=PAPER, stroke_width=2.6)
-        add(member, "path", d=outline, stroke_width=1.2, pointer_events="all")
-        if len(names) <= LARGEST_INJECTOR_NAMES:
-            _name_injector(member, name, boxes[0], places)
-
-
-def _joined_outline(boxes: list[Box]) -> str:
-    """Path around page boxes, gaps as narrow as between a driver's fingers closed."""
-    corners = np.array(boxes)
-    grown = shapely.box(*(corners + np.array([-1, -1, 1, 1]) * _CLOSED_GAP / 2).T)
-    joined = shapely.buffer(shapely.union_all(grown), -_CLOSED_GAP / 2, join_style="mitre")
-    rings = []
-    for polygon in shapely.get_parts(joined):
-        for ring in (polygon.exterior, *polygon.interiors):
-            points = shapely.get_coordinates(ring)[:-1].tolist()
-            rings.append("M" + "L".join(f"{number(x)} {number(y)}" for x, y in points) + "z")
-    return "".join(rings)
-
-
-def _name_injector(member: Element, name: str, box: Box, places: Places) -> None:
-    """Write the pin's name beside its first emitter."""
-    words = "▲ " + plain_text(name, longest=18)
-    label = places.take(box, text_width(words, 11) + 4, 13)
-    if label is None:
-        return
-    _add_haloed(member, label, words, INJECTOR_INK)
-
-
-def _add_haloed(parent: Element, middle: tuple[float, float], words: str, ink: str) -> None:
-    """Write on a white halo, readable on every band."""
-    add_text(
-        parent,
-        middle[0],
-        middle[1] + 4,
-        words,
-        fill=ink,
-        font_weight="bold",
-        stroke=PAPER,
-        stroke_width="3",
-        paint_order="stroke",
-        stroke_linejoin="round",
-        text_anchor="middle",
-    )
 
 
 def site_summary(evidence: Evidence, row: int) -> str:
@@ -146,7 +82,7 @@ def add_sites(parent: Element, evidence: Evidence, frame: Frame, places: Places)
         if label is not None:
             line = f"M{number(x)} {number(y)}L{number(label[0])} {number(label[1])}"
             add(member, "path", d=line, stroke=INK, stroke_width=0.7)
-            _add_haloed(member, label, letter, INK)
+            add_haloed(member, label, letter, INK)
         add(member, "path", d=diamond(x, y), fill=PAPER, stroke=INK, stroke_width=1.2)
 
 

@@ -5,6 +5,9 @@ from __future__ import annotations
 import math
 from xml.etree.ElementTree import Element
 
+import numpy as np
+
+from latchscan.layout.connections import NET_KINDS
 from latchscan.report.field_image import OPACITY, Field
 from latchscan.report.frame import Frame
 from latchscan.report.palette import (
@@ -15,6 +18,8 @@ from latchscan.report.palette import (
     N_FILL,
     P_FILL,
     PAPER,
+    PIN_INK,
+    RING_INK,
     TAP_FILL,
     WATCH_INK,
     WELL_EDGE,
@@ -23,6 +28,7 @@ from latchscan.report.palette import (
     to_hex,
 )
 from latchscan.report.plain import current, measure
+from latchscan.report.svg_injectors import THROUGH_DASH
 from latchscan.report.svg_marks import (
     SITE_LETTERS,
     add_badge,
@@ -31,7 +37,9 @@ from latchscan.report.svg_marks import (
     diamond,
     marked_sites,
 )
-from latchscan.report.svg_parts import add, add_text, shortened
+from latchscan.report.svg_parts import add, add_text, number, shortened
+from latchscan.report.svg_pins import marked_pins, pin_mark
+from latchscan.report.svg_rings import OPEN_DASH, gap_mark, marked_rings
 from latchscan.rules.model import Evidence, Finding
 from latchscan.scan import Scan
 
@@ -47,6 +55,7 @@ def add_panel(
     group = add(parent, "g", id="panel")
     y = _add_legend(group, field, scan.origin.probe_current_a, left, top)
     y = _add_key(group, left, y + 14)
+    y = _add_connections(group, scan.evidence, left, y)
     y = _add_site_list(group, scan.evidence, frame, left, y + 14)
     return _add_finding_list(group, scan.findings, left, y + 14)
 
@@ -108,6 +117,59 @@ def _add_key(parent: Element, x: float, top: float) -> float:
         stroke_width=1.2)  # fmt: skip
     add_text(group, right + 22, at, "▲ injector and pin")
     return y + 4 * _LINE
+
+
+def _add_connections(parent: Element, evidence: Evidence, x: float, top: float) -> float:
+    """Key of pins and rings, how many there are, and how to see a net; nothing without any."""
+    pins, rings = evidence.connections.pins, evidence.connections.rings
+    if len(pins.names) == 0 and len(rings.ids) == 0:
+        return top
+    group = add(parent, "g", id="connection-key")
+    right, below = x + 192, top + _LINE
+    _add_ring_key(group, x, top, open_=False)
+    add_text(group, x + 20, top, "ring, closed")
+    _add_ring_key(group, x, below, open_=True)
+    add_text(group, x + 20, below, "ring, open; its opening")
+    add(group, "rect", x=right, y=top - 9, width=14, height=10, fill="none", stroke=INJECTOR_INK,
+        stroke_width=1.2, stroke_dasharray=THROUGH_DASH)  # fmt: skip
+    add_text(group, right + 22, top, "through a resistor")
+    add(group, "path", d=pin_mark(((right + 2, below - 9, right + 12, below + 1),)), fill=PAPER,
+        stroke=PIN_INK, stroke_width=1.5)  # fmt: skip
+    add_text(group, right + 22, below, "pin or bond pad")
+    y = below + _LINE + 4
+    for words in _connection_words(evidence):
+        add_text(group, x, y, shortened(words, WIDTH, 11), fill=FAINT_INK)
+        y += 14
+    return y
+
+
+def _add_ring_key(parent: Element, x: float, y: float, *, open_: bool) -> None:
+    """A short piece of a ring's line, with an opening in it where it is open."""
+    line = add(parent, "path", d=f"M{number(x)} {number(y - 4)}h14", stroke=RING_INK,
+               stroke_width=1.6)  # fmt: skip
+    if open_:
+        line.set("stroke-dasharray", " ".join(number(length) for length in OPEN_DASH))
+        add(parent, "path", d=gap_mark(x + 7, y - 4), stroke=RING_INK, stroke_width=1.2,
+            fill=PAPER)  # fmt: skip
+
+
+def _connection_words(evidence: Evidence) -> list[str]:
+    """How many pins and rings there are, and what of them is not marked."""
+    pins, rings = evidence.connections.pins, evidence.connections.rings
+    counts = [(int(np.sum(pins.kind == kind)), kind.replace("_", " ")) for kind in NET_KINDS]
+    told = ", ".join(f"{count} {kind}" for count, kind in counts if count)
+    closed = int(np.sum(rings.closed))
+    lines = [f"Pins: {told or 'none'}", f"Rings: {closed} closed, {len(rings.ids) - closed} open"]
+    pins_left = len(pins.names) - len(marked_pins(evidence))
+    rings_left = len(rings.ids) - len(marked_rings(rings))
+    if pins_left or rings_left:
+        lines.append(f"Not marked: {pins_left} pins, {rings_left} rings (see scan.json)")
+    if pins_left < len(pins.names):
+        lines += [
+            "Point at a pin to see its nets: wiring pale,",
+            "diffusions strong; click it to keep them in sight.",
+        ]
+    return lines
 
 
 def _add_site_list(

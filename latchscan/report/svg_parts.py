@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from xml.etree.ElementTree import Element, SubElement
 
-from latchscan.report.palette import INK
+from latchscan.report.palette import INK, PAPER
 from latchscan.report.plain import plain_text
 
 LONGEST_TOOLTIP = 1200
@@ -44,6 +44,23 @@ def add_text(
     element = add(parent, "text", x=x, y=y, font_size=size, **attributes)
     element.text = plain_text(words)
     return element
+
+
+def add_haloed(parent: Element, middle: tuple[float, float], words: str, ink: str) -> None:
+    """Write on a white halo, readable on every band."""
+    add_text(
+        parent,
+        middle[0],
+        middle[1] + 4,
+        words,
+        fill=ink,
+        font_weight="bold",
+        stroke=PAPER,
+        stroke_width="3",
+        paint_order="stroke",
+        stroke_linejoin="round",
+        text_anchor="middle",
+    )
 
 
 def add_title(parent: Element, words: str) -> None:

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from latchscan.layout.model import Floats, Geometries, Ints
 from latchscan.report.frame import Frame
+from latchscan.report.svg_parts import number
 
 NM_PER_UM = 1000.0
 LARGEST_SHAPE_COUNT = 40_000
@@ -19,17 +20,37 @@ PIXELS_PER_UNIT = 2.0
 """Resolution to which a crowded layer is reduced [pixels per page unit]."""
 
 
-def path_data(shapes: Geometries, frame: Frame) -> str:
-    """Path of all `shapes` (polygons and multipolygons), for the even-odd fill rule."""
+def nm_transform(frame: Frame) -> str:
+    """Transform from whole nm, as paths carry them, to the page."""
+    step = frame.scale / NM_PER_UM
+    return f"matrix({step!r} 0 0 {-step!r} {number(frame.left)} {number(frame.top + frame.height)})"
+
+
+def nm_width(frame: Frame, width: float) -> str:
+    """Width of a line of `width` page units among paths in nm."""
+    return number(width * NM_PER_UM / frame.scale)
+
+
+def path_data(
+    shapes: Geometries,
+    frame: Frame,
+    *,
+    most: int | None = None,
+    pixels_per_unit: float = PIXELS_PER_UNIT,
+) -> str:
+    """Path of all `shapes` (polygons and multipolygons), for the even-odd fill rule.
+
+    More than `most` shapes (`LARGEST_SHAPE_COUNT` where None) are reduced to pixels.
+    """
     parts = shapely.get_parts(shapes)
     parts = parts[~shapely.is_empty(parts)]
-    if len(parts) > LARGEST_SHAPE_COUNT:
-        return _crowd_path(shapely.bounds(parts), frame)
+    if len(parts) > (LARGEST_SHAPE_COUNT if most is None else most):
+        return _crowd_path(shapely.bounds(parts), frame, pixels_per_unit)
     bounds = shapely.bounds(parts)
     rectangular = (shapely.get_num_coordinates(parts) == 5) & np.isclose(
         shapely.area(parts), np.prod(bounds[:, 2:] - bounds[:, :2], axis=1), rtol=1e-9
     )
-    rectangles = _rectangles_path(_nm(bounds[rectangular].reshape(-1, 2), frame).reshape(-1, 4))
+    rectangles = rectangles_path(_nm(bounds[rectangular].reshape(-1, 2), frame).reshape(-1, 4))
     return rectangles + "".join(_polygon_path(part, frame) for part in parts[~rectangular])
 
 
@@ -40,7 +61,7 @@ def _nm(points_um: Floats, frame: Frame) -> Ints:
     return points
 
 
-def _rectangles_path(corners_nm: Ints) -> str:
+def rectangles_path(corners_nm: Ints) -> str:
     """Path of rectangles given as x0, y0, x1, y1."""
     return "".join(
         f"M{x0} {y0}h{x1 - x0}v{y1 - y0}h{x0 - x1}z" for x0, y0, x1, y1 in corners_nm.tolist()
@@ -58,13 +79,13 @@ def _polygon_path(polygon: shapely.Polygon, frame: Frame) -> str:
     return "".join(data)
 
 
-def _crowd_path(bounds_um: Floats, frame: Frame) -> str:
+def _crowd_path(bounds_um: Floats, frame: Frame, pixels_per_unit: float) -> str:
     """Path of the pixels that the boxes touch, in horizontal runs."""
-    pixel_um = 1.0 / (frame.scale * PIXELS_PER_UNIT)
+    pixel_um = 1.0 / (frame.scale * pixels_per_unit)
     mask = covered(bounds_um, frame, pixel_um)
     rows, starts, ends = runs(mask)
     edges = np.column_stack((starts, rows, ends, rows + 1)) * pixel_um * NM_PER_UM
-    return _rectangles_path(np.rint(edges).astype(np.int64))
+    return rectangles_path(np.rint(edges).astype(np.int64))
 
 
 def covered(bounds_um: Floats, frame: Frame, pixel_um: float) -> NDArray[np.bool_]:

@@ -1,7 +1,8 @@
 """The table of emitters (``emitters.csv``): every emitter one row, RFC 4180 with LF ends.
 
 Lengths have 4 decimals, areas 6, resistances 4, relative errors 6.  A measure that does not
-exist is an empty field; an unbounded one is ``inf``.
+exist is an empty field; an unbounded one is ``inf``.  ``injector`` is the pin or marker that can
+bias the emitter, ``injector_resistance_ohm`` the least resistance between a pin and it.
 """
 
 from __future__ import annotations
@@ -11,6 +12,9 @@ import io
 import math
 from collections.abc import Iterator
 
+import numpy as np
+
+from latchscan.layout.emitter_nets import emitter_nets
 from latchscan.layout.model import EMITTER_KINDS, Floats
 from latchscan.report.plain import REPLACEMENT, plain_text
 from latchscan.rules.model import Evidence
@@ -31,6 +35,9 @@ COLUMNS = (
     "self_resistance_max_ohm",
     "patch_resistance_ohm",
     "resistance_error",
+    "net",
+    "injector",
+    "injector_resistance_ohm",
 )
 
 
@@ -62,6 +69,20 @@ def _columns(evidence: Evidence) -> Iterator[list[str]]:
     yield _fixed(resistances.max_ohm[:count], 4)
     yield _fixed(resistances.patch_ohm[:count], 4)
     yield _fixed(resistances.relative_error[:count], 6)
+    nets = evidence.connections.nets
+    owners = emitter_nets(evidence.layout, nets).tolist()
+    yield [str(nets.ids[net]) if net >= 0 else "" for net in owners]
+    yield [safe_cell(name) for name in emitters.injector.tolist()]
+    yield _fixed(_injector_ohm(evidence), 4)
+
+
+def _injector_ohm(evidence: Evidence) -> Floats:
+    """(n,) least resistance between a pin and each emitter; NaN where none is known."""
+    injectors = evidence.connections.injectors
+    least = np.full(len(evidence.layout.emitters.ids), np.nan)
+    rows = np.flatnonzero((injectors.emitter >= 0) & (injectors.pin >= 0))
+    np.fmin.at(least, injectors.emitter[rows], injectors.resistance_ohm[rows])
+    return least
 
 
 def _fixed(values: Floats, decimals: int) -> list[str]:

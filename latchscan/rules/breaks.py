@@ -6,11 +6,14 @@ how much, and how to tell a person about one of them.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
+from itertools import compress
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from latchscan.layout.left_out import inside_any
 from latchscan.layout.model import Floats, Ints, Layout
 
 GROUPING_DISTANCE_UM = 10.0
@@ -41,6 +44,9 @@ class Breaks:
         (k,) how bad it is, larger is worse; NaN measures count as the worst.
     box_um
         (k, 4) bounding box of the member.
+    detail
+        (k,) words about each member that only `check` knows and `describe` repeats; empty
+        where the rule has none.
     grouping_um
         Gap between two members' boxes up to which a person would mend both at once.
     """
@@ -55,10 +61,26 @@ class Breaks:
     limit: Floats
     excess: Floats
     box_um: Floats
+    detail: tuple[str, ...] = ()
     grouping_um: float = GROUPING_DISTANCE_UM
 
     def __len__(self) -> int:
         return len(self.member)
+
+
+def outside(breaks: Breaks, boxes_um: Floats) -> Breaks:
+    """The breaks whose places (x, y) lie in none of the boxes (k, 4) [um]."""
+    if not len(boxes_um):
+        return breaks
+    kept = ~inside_any(breaks.x_um, breaks.y_um, boxes_um)
+    columns: dict[str, Any] = {}
+    for column in fields(breaks):
+        value = getattr(breaks, column.name)
+        if isinstance(value, np.ndarray):
+            columns[column.name] = value[kept]
+        elif isinstance(value, tuple) and len(value) == len(breaks):
+            columns[column.name] = tuple(compress(value, kept.tolist()))
+    return replace(breaks, **columns)
 
 
 def over_limit(measured: Floats, limit: Floats) -> NDArray[np.bool_]:
@@ -74,7 +96,7 @@ def ratio(worse: Floats, better: Floats) -> Floats:
     >>> ratio(np.array([3.0, np.nan]), np.array([2.0, 2.0])).tolist()
     [1.5, inf]
     """
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         quotient = np.asarray(worse / better, dtype=np.float64)
     return np.where(np.isnan(quotient), np.inf, quotient)
 

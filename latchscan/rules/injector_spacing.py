@@ -2,7 +2,8 @@
 
 What it measures
     The smallest distance [um] from every n+ injector to the nearest n-well, and from every p+
-    injector to the nearest n+ diffusion outside wells.
+    injector to the nearest n+ diffusion outside wells.  A guard well around the injector
+    itself, and the well without p+ around its own isolated p-well, collect: they do not count.
 Why it matters
     A pin pulled outside its supplies makes the injector emit carriers into the silicon.  The
     nearer the foreign well, the larger the share that it collects, and that share is what

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Literal
 
+from latchscan.layout.connections import Connections
 from latchscan.layout.model import Box, Distances, Layout, Pairs, Spacings
 from latchscan.parasitics.model import Resistances, Transfers
 from latchscan.pnpn.model import Sites
@@ -21,6 +22,7 @@ class Evidence:
     pairs: Pairs
     transfers: Transfers
     sites: Sites
+    connections: Connections
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -36,15 +38,15 @@ class Finding:
     severity
         ``fail`` or ``watch``.
     subject
-        Id of the worst member (an emitter, tap, body or site).
+        Id of the worst member (an emitter, tap, body, site, net or ring) or name of a pin.
     body
-        Id of the body it concerns.
+        Id of the body it concerns, "" where there is none.
     x_um, y_um
         Where the worst member breaks the limit.
     measured, limit
         The worst measure and the limit it breaks [unit].
     unit
-        ``um``, ``ohm``, ``1``; the unit of both.
+        ``um``, ``ohm``, ``V``, ``1``; the unit of both.
     message
         One sentence for a person: what is wrong, where, what would mend it.
     count

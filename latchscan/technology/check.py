@@ -1,18 +1,18 @@
 """Every problem of a technology file at once, each with its line and column.
 
 Three looks at the same text: the YAML itself (`document`), the keys and values against the
-typed model (`misfits`), and the names that expressions use (`names`).  A file without any
-problem becomes a `Technology`.
+typed model (`misfits`), and the names that the file uses (`names`, `wiring`).  A file without
+any problem becomes a `Technology`.
 """
 
 from __future__ import annotations
 
 from pydantic import ValidationError
 
-from latchscan.technology.document import read_document
+from latchscan.technology.document import Found, read_document
 from latchscan.technology.misfits import misfits
 from latchscan.technology.model import Technology
-from latchscan.technology.names import Found, problems_with_names
+from latchscan.technology.names import problems_with_names
 from latchscan.technology.problem import Problem, problem_at
 
 

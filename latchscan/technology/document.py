@@ -24,6 +24,27 @@ MAX_BYTES = 250_000
 MAX_NODES = 5_000
 """Values after aliases are followed: a few hundred bytes of aliases can stand for millions."""
 MAX_DEPTH = 30
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FileKind:
+    """What a file is called in messages and how large one may be.
+
+    Attributes
+    ----------
+    noun
+        What the file holds.
+    most_bytes, most_nodes
+        Bytes, and values after aliases are followed, beyond which it is something else.
+    """
+
+    noun: str
+    most_bytes: int
+    most_nodes: int
+
+
+TECHNOLOGY_FILE = FileKind(noun="technology", most_bytes=MAX_BYTES, most_nodes=MAX_NODES)
+
 _LONGEST_INTEGER = 18
 
 _TAG = "tag:yaml.org,2002:"
@@ -31,6 +52,8 @@ _DECIMAL = re.compile(r"[-+]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][-+]?[0-9]+)?\Z"
 _OCTAL = re.compile(r"[-+]?0[0-9]+\Z")
 _OPENING = re.compile(r"(?:[!&]\S*\s+)*(?:(?P<quote>['\"])|[|>][^\n]*\n)?")
 """What stands before the text of a scalar: tag, anchor, quote, block header."""
+_HALF_CHARACTER = re.compile("[\ud800-\udfff]")
+"""An escape may spell half of a pair that stands for one character."""
 _NOT_FINITE = {".inf": float("inf"), ".nan": float("nan")}
 
 
@@ -40,6 +63,10 @@ class Place:
 
     line: int
     column: int
+
+
+Found: TypeAlias = tuple[Place, Path, str]
+"""Place, path and message of a problem."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -71,8 +98,11 @@ class Document:
         The whole text without a byte order mark.
     spans
         First and last index in `text` of every scalar.
+    kind
+        What the file ought to be.
     """
 
+    kind: FileKind = TECHNOLOGY_FILE
     text: str = ""
     data: Data = None
     slips: list[Slip] = field(default_factory=list)
@@ -123,9 +153,9 @@ class Document:
         return Place(self.text.count("\n", 0, index) + 1, index - line_start + 1)
 
 
-def read_document(content: str | bytes) -> Document:
+def read_document(content: str | bytes, kind: FileKind = TECHNOLOGY_FILE) -> Document:
     """Data and places of a YAML text; never raises for what the text holds."""
-    document = Document()
+    document = Document(kind=kind)
     text = _decoded(content, document)
     if text is None:
         return document
@@ -142,8 +172,10 @@ def _slip(document: Document, place: Place, message: str, path: Path = ()) -> No
 
 
 def _decoded(content: str | bytes, document: Document) -> str | None:
-    if len(content) > MAX_BYTES:
-        _slip(document, Place(1, 1), f"larger than {MAX_BYTES} bytes, expected a technology file")
+    kind = document.kind
+    if len(content) > kind.most_bytes:
+        message = f"larger than {kind.most_bytes} bytes, expected a {kind.noun} file"
+        _slip(document, Place(1, 1), message)
         return None
     if isinstance(content, str):
         return content
@@ -178,7 +210,7 @@ def _root(document: Document) -> yaml.Node | None:
         _slip(document, Place(1, 1), f"not YAML: {one_line(str(error))}")
         return None
     if root is None:
-        _slip(document, Place(1, 1), "the file is empty, expected a technology")
+        _slip(document, Place(1, 1), f"the file is empty, expected a {document.kind.noun}")
     return root
 
 
@@ -195,8 +227,9 @@ def _is_small(document: Document) -> bool:
             _slip(document, place, f"nested too deep, expected at most {MAX_DEPTH} levels")
             return False
         nodes += isinstance(event, yaml.NodeEvent)
-        if nodes > 2 * MAX_NODES:
-            _slip(document, _place_of(event), f"more than {MAX_NODES} keys and values")
+        most = document.kind.most_nodes
+        if nodes > 2 * most:
+            _slip(document, _place_of(event), f"more than {most} keys and values")
             return False
     return True
 
@@ -220,10 +253,12 @@ class _Walk:
 
     def value(self, node: yaml.Node, path: Path) -> Data:
         self.nodes += 1
-        if self.nodes == MAX_NODES + 1:
-            self.slip(node, path, f"more than {MAX_NODES} values, expected a technology file")
+        kind = self.document.kind
+        if self.nodes == kind.most_nodes + 1:
+            message = f"more than {kind.most_nodes} values, expected a {kind.noun} file"
+            self.slip(node, path, message)
         # An alias to one of its own parents ends here too: the path only ever grows.
-        if self.nodes > MAX_NODES:
+        if self.nodes > kind.most_nodes:
             self.document.blank.add(path)
             return None
         if len(path) > MAX_DEPTH:
@@ -250,6 +285,9 @@ class _Walk:
                 self.slip(key_node, path, "a key must be plain text, got a list or mapping")
                 continue
             key = key_node.value
+            if _HALF_CHARACTER.search(key):
+                self.slip(key_node, path, f"{shown_text(key)} is no valid text, expected a key")
+                continue
             here = (*path, key)
             if key_node.tag == f"{_TAG}merge":
                 self.slip(key_node, here, "merge keys are not supported, expected keys in full")

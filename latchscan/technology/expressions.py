@@ -286,7 +286,7 @@ def parse_expression(text: str) -> Expression:
     parser = _Parser(text)
     expression = parser.either()
     rest = parser.next
-    if rest.text.lower() in OPERATORS:
+    if rest.kind == "word" and rest.text.lower() in OPERATORS:
         raise ExpressionError(
             f"{rest.shown} is not an operator here, expected `{rest.text.lower()}` in small"
             " letters between two names",

@@ -15,9 +15,16 @@ from typing import Annotated, Any, NamedTuple, Union, get_args, get_origin
 from pydantic import BaseModel, ValidationError
 from pydantic_core import ErrorDetails
 
-from latchscan.technology.document import Document, Path, Place, looks_decimal, one_line, shown_text
+from latchscan.technology.document import (
+    Document,
+    Found,
+    Path,
+    Place,
+    looks_decimal,
+    one_line,
+    shown_text,
+)
 from latchscan.technology.model import Quantity, Technology
-from latchscan.technology.names import Found
 
 UNITS = {
     "ohm_sq": "ohm per square",
@@ -60,6 +67,7 @@ class _Misfit(NamedTuple):
     document: Document
     path: Path
     error: ErrorDetails
+    root: type[BaseModel]
 
     @property
     def got(self) -> str:
@@ -76,7 +84,9 @@ class _Misfit(NamedTuple):
         return f"the number {value:g}" if isinstance(value, float) else f"the number {value}"
 
 
-def misfits(document: Document, error: ValidationError) -> Iterator[Found]:
+def misfits(
+    document: Document, error: ValidationError, root: type[BaseModel] = Technology
+) -> Iterator[Found]:
     """Every error of the model, in words and with its place.
 
     Parameters
@@ -85,13 +95,15 @@ def misfits(document: Document, error: ValidationError) -> Iterator[Found]:
         The file.  What `document.blank` holds is already reported and left out here.
     error
         What the model raised for the document's data.
+    root
+        The model of the whole file.
     """
     found = [
-        _Misfit(document, _path(details, document), details)
+        _Misfit(document, _path(details, document), details, root)
         for details in error.errors(include_url=False)
     ]
     meant = {
-        (*misfit.path[:-1], nearest_key(misfit.path))
+        (*misfit.path[:-1], nearest_key(misfit.path, root))
         for misfit in found
         if misfit.error["type"] == "extra_forbidden"
     }
@@ -116,12 +128,14 @@ def _path(details: ErrorDetails, document: Document) -> Path:
 
 
 def _told(misfit: _Misfit) -> Iterator[Found]:
-    document, path, error = misfit
+    document, path, error, root = misfit
     kind = error["type"]
     if kind == "missing":
-        yield _parent_place(document, path), path, _missing(path)
+        yield _parent_place(document, path), path, _missing(path, root)
     elif kind == "extra_forbidden":
-        yield document.keys[path], path, _unknown(path)
+        yield document.keys[path], path, _unknown(path, root)
+    elif error["loc"][-1:] == ("[key]",) and kind not in _WORDING:
+        yield document.keys[path], path, error["msg"]
     elif error["loc"][-1:] == ("[key]",):
         message = "expected a name of small letters, digits and `_` that starts with a letter"
         yield document.keys[path], path, f"not a usable name, {message}"
@@ -144,16 +158,16 @@ def _parent_place(document: Document, path: Path) -> Place:
     return document.keys.get(parent) or document.values[parent]
 
 
-def _missing(path: Path) -> str:
-    field = _field(path)
+def _missing(path: Path, root: type[BaseModel]) -> str:
+    field = _field(path, root)
     what = (field.description or "").split("\n")[0].rstrip(".") if field is not None else ""
     return f"missing, expected {what[:1].lower()}{what[1:]}" if what else "missing, expected it"
 
 
-def _unknown(path: Path) -> str:
+def _unknown(path: Path, root: type[BaseModel]) -> str:
     key = str(path[-1])
     what = _KINDS_OF_KEY.get(path[:-1], "key")
-    near = nearest_key(path)
+    near = nearest_key(path, root)
     if near:
         wrong, right = split_unit(key)[1], split_unit(near)[1]
         if right and wrong != right:
@@ -162,7 +176,7 @@ def _unknown(path: Path) -> str:
                 return f"wrong unit {shown_text(wrong)} in the key, expected {in_unit}"
             return f"unknown {what}, expected {in_unit}"
         return f"unknown {what}, expected `{near}`"
-    return f"unknown {what}, expected one of {', '.join(valid_keys(path[:-1])) or 'none'}"
+    return f"unknown {what}, expected one of {', '.join(valid_keys(path[:-1], root)) or 'none'}"
 
 
 def split_unit(key: str) -> tuple[str, str]:
@@ -179,34 +193,34 @@ def split_unit(key: str) -> tuple[str, str]:
     return key, ""
 
 
-def nearest_key(path: Path) -> str:
+def nearest_key(path: Path, root: type[BaseModel] = Technology) -> str:
     """Valid key that an unknown one is most likely to mean, "" where none is near."""
     key = str(path[-1])
-    valid = valid_keys(path[:-1])
+    valid = valid_keys(path[:-1], root)
     stem = split_unit(key)[0]
     same = [other for other in valid if split_unit(other)[0] == stem]
     return (same or get_close_matches(key, valid, n=1) or [""])[0]
 
 
-def valid_keys(path: Path) -> tuple[str, ...]:
+def valid_keys(path: Path, root: type[BaseModel] = Technology) -> tuple[str, ...]:
     """Keys that the model has at a path; empty where keys are free or there is no mapping."""
-    model = _annotation(path)
+    model = _annotation(path, root)
     if isinstance(model, type) and issubclass(model, BaseModel):
         return tuple(field.alias or name for name, field in model.model_fields.items())
     return ()
 
 
-def _field(path: Path) -> Any:
-    model = _annotation(path[:-1])
+def _field(path: Path, root: type[BaseModel]) -> Any:
+    model = _annotation(path[:-1], root)
     if isinstance(model, type) and issubclass(model, BaseModel):
         by_key = {field.alias or name: field for name, field in model.model_fields.items()}
         return by_key.get(str(path[-1]))
     return None
 
 
-def _annotation(path: Path) -> Any:
+def _annotation(path: Path, root: type[BaseModel]) -> Any:
     """Type that the model has at a path, without its annotations; None where it has none."""
-    here: Any = Technology
+    here: Any = root
     for part in path:
         if isinstance(here, type) and issubclass(here, BaseModel):
             by_key = {field.alias or name: field for name, field in here.model_fields.items()}
@@ -258,8 +272,8 @@ def _rewritten(text: str) -> str:
 
 
 def _quantity_or_mapping(misfit: _Misfit) -> str:
-    if _annotation(misfit.path) is not Quantity:
-        keys = ", ".join(valid_keys(misfit.path))
+    if _annotation(misfit.path, misfit.root) is not Quantity:
+        keys = ", ".join(valid_keys(misfit.path, misfit.root))
         return f"got {misfit.got}, expected a mapping with the keys {keys}"
     if isinstance(misfit.error["input"], str):
         return _number(misfit)
@@ -307,7 +321,8 @@ def _bound(words: str, key: str) -> Callable[[_Misfit], str]:
 
 
 def _empty(misfit: _Misfit) -> str:
-    return f"got {misfit.got} without entries, expected at least one"
+    least = {1: "one", 2: "two"}[misfit.error["ctx"]["min_length"]]
+    return f"got {misfit.got} without entries, expected at least {least}"
 
 
 def _as_it_is(misfit: _Misfit) -> str:

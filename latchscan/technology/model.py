@@ -3,7 +3,9 @@
 These classes are both the validator of the YAML file and the frozen value that the rest of
 the program reads.  Keys of the file are exactly the field names below.  Lengths are in um
 and resistances in ohm; the two customary exceptions (``_ohm_cm``, ``_cm3``) are converted
-by properties here and nowhere else.
+by properties here and nowhere else.  Numbers and their ranges are in `quantities`, wiring is
+in `conductors` and the limits of the rules are in `limits`; what others need of them is
+importable from here.
 
 The text under a field is what editors show for its key, by way of the JSON Schema.  Ranges
 are those outside which a number is a slip of the pen or of the unit, not a rare process.
@@ -12,166 +14,112 @@ are those outside which a number is a slip of the pen or of the unit, not a rare
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
-from typing import Annotated, Any, Literal, Self, TypeAlias
+from typing import Annotated, Literal
 
-from pydantic import (
-    AfterValidator,
-    BaseModel,
-    ConfigDict,
-    Field,
-    FiniteFloat,
-    GetCoreSchemaHandler,
-    GetJsonSchemaHandler,
-    StringConstraints,
-    model_validator,
+from pydantic import BaseModel, Field, FiniteFloat
+
+from latchscan.technology.conductors import (
+    Conductor,
+    ConductorKind,
+    Conductors,
+    Connection,
+    Pads,
+    ResistorDevice,
 )
-from pydantic_core import CoreSchema, PydanticCustomError, core_schema
+from latchscan.technology.limits import (
+    DoubleRingRule,
+    ForwardBiasRule,
+    InjectorSpacingRule,
+    IsolationGapRule,
+    LoopGainRule,
+    NetNamesRule,
+    RingContactsRule,
+    RingGapRule,
+    RingKind,
+    RingMissingRule,
+    RingNetRule,
+    RingWidthRule,
+    Rules,
+    Severity,
+    TapDistanceRule,
+    TapReachRule,
+    TieConflictRule,
+    TieNetRule,
+    TieResistanceRule,
+    UncontactedTapRule,
+    UntiedBodyRule,
+    WellResistanceRule,
+    WellSpacingRule,
+)
+from latchscan.technology.quantities import (
+    ContactResistance,
+    Distance,
+    Doping,
+    Exponent,
+    ExpressionText,
+    Fraction,
+    Gain,
+    KneeDensity,
+    LayerPair,
+    Name,
+    Quantity,
+    SaturationDensity,
+    Share,
+    SheetResistance,
+    Strict,
+    Within,
+)
+
+__all__ = [
+    "UM_PER_CM",
+    "Conductor",
+    "ConductorKind",
+    "Conductors",
+    "Connection",
+    "DoubleRingRule",
+    "ForwardBiasRule",
+    "InjectorSpacingRule",
+    "IsolationGapRule",
+    "Labels",
+    "LateralNpn",
+    "Layer",
+    "Loop",
+    "LoopGainRule",
+    "NetNamesRule",
+    "Pads",
+    "Quantity",
+    "ResistorDevice",
+    "RingContactsRule",
+    "RingGapRule",
+    "RingKind",
+    "RingMissingRule",
+    "RingNetRule",
+    "RingSearch",
+    "RingWidthRule",
+    "Roles",
+    "Rules",
+    "Severity",
+    "Substrate",
+    "SubstrateLayer",
+    "TapDistanceRule",
+    "TapReachRule",
+    "Technology",
+    "TieConflictRule",
+    "TieNetRule",
+    "TieResistanceRule",
+    "Transistors",
+    "UncontactedTapRule",
+    "UntiedBodyRule",
+    "VerticalPnp",
+    "WellResistanceRule",
+    "WellSpacingRule",
+    "Wells",
+]
 
 UM_PER_CM = 1.0e4
-LARGEST_LAYER = 65535
-"""GDSII stores layer and datatype numbers in two bytes."""
 
 
-def _require_two_bytes(pair: str) -> str:
-    if any(int(number) > LARGEST_LAYER for number in pair.split("/")):
-        raise PydanticCustomError(
-            "layer_outside",
-            "number out of range, expected 0 to {largest}",
-            {"largest": LARGEST_LAYER},
-        )
-    return pair
-
-
-LayerPair: TypeAlias = Annotated[
-    str,
-    StringConstraints(pattern=r"^(0|[1-9][0-9]{0,4})/(0|[1-9][0-9]{0,4})$"),
-    AfterValidator(_require_two_bytes),
-]
-Name: TypeAlias = Annotated[str, StringConstraints(pattern=r"^[a-z][a-z0-9_]*$")]
-ExpressionText: TypeAlias = Annotated[
-    str,
-    Field(examples=["active and pplus and not poly", "grow(wider(nwell, 3.0), 1.0)"]),
-]
-Severity: TypeAlias = Literal["fail", "watch", "off"]
-
-
-class _Strict(BaseModel):
-    model_config = ConfigDict(
-        frozen=True, extra="forbid", strict=True, use_attribute_docstrings=True
-    )
-
-
-MEMBERS = ("low", "typical", "high")
-
-
-class Quantity(_Strict):
-    """A physical number with an optional range and its origin.
-
-    In the file it is either a bare number or a mapping with ``typical`` and, when known,
-    ``low``, ``high``, ``source`` (where the value is published) or ``assumption: true``.
-    """
-
-    typical: FiniteFloat
-    """The value that a scan uses."""
-    low: FiniteFloat | None = None
-    """Smallest value to be expected."""
-    high: FiniteFloat | None = None
-    """Largest value to be expected."""
-    source: str | None = None
-    """Where the value is published: document, revision, section."""
-    assumption: bool = False
-    """True where nothing is published; `low` and `high` are then needed."""
-
-    @model_validator(mode="before")
-    @classmethod
-    def _accept_bare_number(cls, value: Any) -> Any:
-        if isinstance(value, (int, float)) and not isinstance(value, bool):
-            return {"typical": value}
-        return value
-
-    @model_validator(mode="after")
-    def _ordered(self) -> Self:
-        low = self.typical if self.low is None else self.low
-        high = self.typical if self.high is None else self.high
-        wrong = [
-            m for m, bad in (("low", low > self.typical), ("high", high < self.typical)) if bad
-        ]
-        if wrong:
-            raise PydanticCustomError(
-                "quantity_order",
-                "out of order, expected low <= typical <= high, got {low}, {typical}, {high}",
-                {
-                    "members": ["low" if low > self.typical else "high"],
-                    "low": f"{low:g}",
-                    "typical": f"{self.typical:g}",
-                    "high": f"{high:g}",
-                },
-            )
-        if self.assumption and (self.low is None or self.high is None):
-            raise PydanticCustomError(
-                "quantity_range",
-                "an assumption without its range, expected `low` and `high` beside `typical`",
-            )
-        return self
-
-
-@dataclass(frozen=True, slots=True)
-class Within:
-    """Range that every member of a quantity must keep, ends included."""
-
-    smallest: float
-    largest: float
-
-    def __get_pydantic_core_schema__(
-        self, source: Any, handler: GetCoreSchemaHandler
-    ) -> CoreSchema:
-        return core_schema.no_info_after_validator_function(self._kept, handler(source))
-
-    def __get_pydantic_json_schema__(
-        self, schema: CoreSchema, handler: GetJsonSchemaHandler
-    ) -> dict[str, Any]:
-        number = {"type": "number", "minimum": self.smallest, "maximum": self.largest}
-        whole = dict(handler.resolve_ref_schema(handler(schema)))
-        members = {
-            key: {**number, "description": member["description"]} if key in MEMBERS else member
-            for key, member in whole["properties"].items()
-        }
-        return {"anyOf": [number, {**whole, "properties": members}]}
-
-    def _kept(self, value: Quantity) -> Quantity:
-        wrong = [
-            member
-            for member in MEMBERS
-            if (number := getattr(value, member)) is not None
-            and not self.smallest <= number <= self.largest
-        ]
-        if wrong:
-            raise PydanticCustomError(
-                "quantity_outside",
-                "out of range, expected {smallest} to {largest}, got {got}",
-                {
-                    "members": wrong,
-                    "smallest": f"{self.smallest:g}",
-                    "largest": f"{self.largest:g}",
-                    "got": ", ".join(f"{getattr(value, member):g}" for member in wrong),
-                },
-            )
-        return value
-
-
-SheetResistance: TypeAlias = Annotated[Quantity, Within(0.1, 1.0e6)]
-ContactResistance: TypeAlias = Annotated[Quantity, Within(0.0, 1.0e5)]
-Doping: TypeAlias = Annotated[Quantity, Within(1.0e11, 1.0e21)]
-Gain: TypeAlias = Annotated[Quantity, Within(1.0e-3, 1.0e4)]
-SaturationDensity: TypeAlias = Annotated[Quantity, Within(1.0e-24, 1.0e-9)]
-KneeDensity: TypeAlias = Annotated[Quantity, Within(1.0e-9, 1.0)]
-Exponent: TypeAlias = Annotated[Quantity, Within(0.0, 10.0)]
-Share: TypeAlias = Annotated[Quantity, Within(1.0e-6, 1.0)]
-Distance: TypeAlias = Annotated[FiniteFloat, Field(gt=0, le=1.0e4)]
-
-
-class Layer(_Strict):
+class Layer(Strict):
     """One drawn layer: its layer/datatype pairs and whether a layout must have it."""
 
     gds: tuple[LayerPair, ...] = Field(min_length=1, strict=False)
@@ -180,7 +128,7 @@ class Layer(_Strict):
     """True where a layout without this layer is refused."""
 
 
-class Roles(_Strict):
+class Roles(Strict):
     """Expressions that derive each role from the layers and from ``derived`` names."""
 
     nwell: ExpressionText
@@ -203,7 +151,7 @@ class Roles(_Strict):
     """Marker over diffusions that something outside can force beyond the rails."""
 
 
-class Labels(_Strict):
+class Labels(Strict):
     """Text layers whose strings name the shape beneath them, and which names are supplies."""
 
     layers: tuple[LayerPair, ...] = Field(default=(), strict=False)
@@ -212,9 +160,11 @@ class Labels(_Strict):
     """Names of the positive supplies."""
     ground_names: tuple[str, ...] = Field(default=(), strict=False)
     """Names of the grounds."""
+    remark_names: tuple[str, ...] = Field(default=(), strict=False)
+    """Texts that name no net, such as device names and parameters."""
 
 
-class Wells(_Strict):
+class Wells(Strict):
     """Sheet resistances of the wells by region and the resistance of their tap contacts."""
 
     nwell_sheet_resistance_ohm_sq: SheetResistance
@@ -231,7 +181,7 @@ class Wells(_Strict):
     """Resistance of one contact of a well tap [ohm]."""
 
 
-class SubstrateLayer(_Strict):
+class SubstrateLayer(Strict):
     """One horizontal layer of the substrate, listed from the surface downwards."""
 
     resistivity_ohm_cm: Annotated[Quantity, Within(1.0e-4, 1.0e5)]
@@ -245,7 +195,7 @@ class SubstrateLayer(_Strict):
         return self.resistivity_ohm_cm.typical * UM_PER_CM
 
 
-class Substrate(_Strict):
+class Substrate(Strict):
     """The stack under the wells, and the p-well sheet on top of it."""
 
     layers: tuple[SubstrateLayer, ...] = Field(min_length=1, strict=False)
@@ -258,7 +208,7 @@ class Substrate(_Strict):
     """Resistance of one contact of a substrate tap [ohm]."""
 
 
-class VerticalPnp(_Strict):
+class VerticalPnp(Strict):
     """The p+ / n-well / substrate transistor."""
 
     beta: Gain
@@ -273,7 +223,7 @@ class VerticalPnp(_Strict):
     """m in beta ~ (T/T0)^m, T in kelvin."""
 
 
-class LateralNpn(_Strict):
+class LateralNpn(Strict):
     """The n+ / substrate / n-well transistor, its gain in closed form of the spacing."""
 
     electron_diffusion_length_um: Annotated[Quantity, Within(0.1, 1.0e4)]
@@ -292,14 +242,14 @@ class LateralNpn(_Strict):
     """m in beta ~ (T/T0)^m, T in kelvin."""
 
 
-class Transistors(_Strict):
+class Transistors(Strict):
     """The two parasitic transistors."""
 
     vertical_pnp: VerticalPnp
     lateral_npn: LateralNpn
 
 
-class Loop(_Strict):
+class Loop(Strict):
     """Conditions at which the thyristor's loop is evaluated."""
 
     supply_v: Annotated[FiniteFloat, Field(ge=0.1, le=1.0e3)]
@@ -314,87 +264,19 @@ class Loop(_Strict):
     """Where the conditions are published or why they were chosen."""
 
 
-class _Rule(_Strict):
-    source: str = ""
-    """Where the limit is published or why it was chosen."""
+class RingSearch(Strict):
+    """What counts as a guard ring and how far around an injector one is looked for."""
+
+    reach_um: Distance = 30.0
+    """Farthest strip from an injector that may belong to its ring [um]."""
+    least_coverage: Fraction = 0.5
+    """Share of the shortest closed curve around an injector that must run inside strips; what
+    covers less of it is no ring."""
+    contact_reach_um: Distance = 2.0
+    """Distance from a contact up to which a strip's area counts as contacted [um]."""
 
 
-class TapDistanceRule(_Rule):
-    """Limits of the rule ``tap-distance``: any point of a diffusion to its body's tap."""
-
-    severity: Severity = "fail"
-    """What breaking the limit means; `off` leaves the rule out."""
-    p_diffusion_max_um: Distance
-    """p+ in an n-well to the nearest well tap [um]."""
-    n_diffusion_max_um: Distance
-    """n+ outside n-wells to the nearest substrate tap [um]."""
-
-
-class UntiedBodyRule(_Rule):
-    """Severity of the rule ``untied-body``: a well or substrate without a contacted tap."""
-
-    severity: Severity = "fail"
-    """What breaking the limit means; `off` leaves the rule out."""
-
-
-class UncontactedTapRule(_Rule):
-    """Severity of the rule ``uncontacted-tap``: a tap without a contact."""
-
-    severity: Severity = "watch"
-    """What breaking the limit means; `off` leaves the rule out."""
-
-
-class TapReachRule(_Rule):
-    """Limit of the rule ``tap-reach``: tap area beyond its last contact."""
-
-    severity: Severity = "fail"
-    """What breaking the limit means; `off` leaves the rule out."""
-    max_um: Distance
-    """Farthest point of a tap from its nearest contact [um]."""
-
-
-class InjectorSpacingRule(_Rule):
-    """Limit of the rule ``injector-spacing``: from an injector to the nearest foreign well."""
-
-    severity: Severity = "fail"
-    """What breaking the limit means; `off` leaves the rule out."""
-    min_um: Distance
-    """Smallest spacing allowed [um]."""
-
-
-class WellResistanceRule(_Rule):
-    """Limit of the rule ``well-resistance``: patch resistance of an emitter's well."""
-
-    severity: Severity = "watch"
-    """What breaking the limit means; `off` leaves the rule out."""
-    max_ohm: Annotated[FiniteFloat, Field(gt=0, le=1.0e9)]
-    """Largest patch resistance allowed [ohm]."""
-
-
-class LoopGainRule(_Rule):
-    """Limit of the rule ``loop-gain`` at the probe current."""
-
-    severity: Severity = "fail"
-    """What breaking the limit means; `off` leaves the rule out."""
-    max_gain: Annotated[FiniteFloat, Field(gt=0, le=1.0e6)]
-    """Largest loop gain allowed; a loop of gain 1 or more regenerates."""
-
-
-class Rules(_Strict):
-    """Limits and severities, one block a rule; the key is the rule's name."""
-
-    tap_distance: TapDistanceRule = Field(alias="tap-distance")
-    untied_body: UntiedBodyRule = Field(alias="untied-body", default_factory=UntiedBodyRule)
-    uncontacted_tap: UncontactedTapRule = Field(
-        alias="uncontacted-tap", default_factory=UncontactedTapRule
-    )
-    tap_reach: TapReachRule = Field(alias="tap-reach")
-    injector_spacing: InjectorSpacingRule = Field(alias="injector-spacing")
-    well_resistance: WellResistanceRule = Field(alias="well-resistance")
-    loop_gain: LoopGainRule = Field(alias="loop-gain")
-
-
-class Technology(_Strict):
+class Technology(Strict):
     """A whole technology file."""
 
     format: Literal["latchscan-technology"]
@@ -409,7 +291,7 @@ class Technology(_Strict):
     """Temperature of a scan unless the command line gives another [degrees Celsius]."""
     layers: dict[Name, Layer] = Field(min_length=1)
     """Drawn layers by the names that expressions use."""
-    derived: dict[Name, ExpressionText] = {}
+    derived: dict[Name, ExpressionText] = Field(default_factory=dict)
     """Names for intermediate results, in any order."""
     roles: Roles
     """What each role is drawn as."""
@@ -423,8 +305,17 @@ class Technology(_Strict):
     """Numbers of the parasitic transistors."""
     loop: Loop
     """Conditions of the loop's evaluation."""
+    conductors: Conductors | None = None
+    """What is connected to what; without it pins, ties and rings are not traced."""
+    rings: RingSearch = RingSearch()
+    """How guard rings are recognised."""
     rules: Rules
     """Limits of the rules."""
+
+    def text_layers(self) -> tuple[LayerPair, ...]:
+        """Layer/texttype pairs of all texts that can name a net, general ones first."""
+        own = self.conductors.layers.values() if self.conductors is not None else ()
+        return (*self.labels.layers, *(pair for layer in own for pair in layer.texts))
 
     def quantities(self) -> tuple[tuple[str, Quantity], ...]:
         """Every quantity with its key, such as ``substrate.layers[0].thickness_um``."""
@@ -437,6 +328,9 @@ def _quantities(part: object, key: str) -> Iterator[tuple[str, Quantity]]:
     elif isinstance(part, BaseModel):
         for name in type(part).model_fields:
             yield from _quantities(getattr(part, name), f"{key}.{name}".removeprefix("."))
+    elif isinstance(part, dict):
+        for name, item in part.items():
+            yield from _quantities(item, f"{key}.{name}")
     elif isinstance(part, tuple):
         for index, item in enumerate(part):
             yield from _quantities(item, f"{key}[{index}]")

@@ -11,7 +11,7 @@ from collections import deque
 from collections.abc import Iterator, Mapping
 from difflib import get_close_matches
 
-from latchscan.technology.document import Data, Document, Path, Place, one_line, shown_text
+from latchscan.technology.document import Data, Document, Found, Path, one_line, shown_text
 from latchscan.technology.expressions import (
     RESERVED,
     ExpressionError,
@@ -20,9 +20,7 @@ from latchscan.technology.expressions import (
     parse_expression,
 )
 from latchscan.technology.model import Roles
-
-Found = tuple[Place, Path, str]
-"""Place, path and message of a problem."""
+from latchscan.technology.wiring import SECTION, problems_with_wiring, shapes
 
 _PAIR = re.compile(r"[0-9]+/[0-9]+\Z")
 
@@ -38,6 +36,7 @@ def problems_with_names(document: Document) -> Iterator[Found]:
         yield from _wrong_expression(document, path, text, known)
     yield from _cycles(document, derived)
     yield from _pairs_used_twice(document, layers)
+    yield from problems_with_wiring(document)
 
 
 def _mapping(data: Mapping[str, Data], key: str) -> Mapping[str, Data]:
@@ -65,6 +64,7 @@ def _expressions(data: Mapping[str, Data]) -> Iterator[tuple[Path, str]]:
         for name, text in _mapping(data, section).items():
             if isinstance(text, str) and (section == "derived" or name in Roles.model_fields):
                 yield (section, name), text
+    yield from shapes(_mapping(data, SECTION))
 
 
 def _wrong_expression(

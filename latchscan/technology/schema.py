@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from pydantic import BaseModel
+
 from latchscan.technology.model import Technology
 
 DIALECT = "https://json-schema.org/draft/2020-12/schema"
@@ -17,8 +19,13 @@ def technology_schema() -> dict[str, Any]:
     It holds keys, types and ranges.  Names in expressions, cycles and pairs used twice are
     beyond a schema; `latchscan.technology.check.check_technology` finds those.
     """
-    schema: dict[str, Any] = _without_null(Technology.model_json_schema(by_alias=True))
-    return {"$schema": DIALECT, "title": "latchscan technology", **schema}
+    return model_schema(Technology, "latchscan technology")
+
+
+def model_schema(model: type[BaseModel], title: str) -> dict[str, Any]:
+    """JSON Schema (2020-12) of the file that a model describes."""
+    schema: dict[str, Any] = _without_null(model.model_json_schema(by_alias=True))
+    return {"$schema": DIALECT, **schema, "title": title}
 
 
 def _without_null(part: Any) -> Any:

@@ -2,7 +2,9 @@
 
 ``python tests/bench/peers.py union LAYOUT`` merges every layer with one `shapely.union_all`;
 ``python tests/bench/peers.py wells LAYOUT COUNT`` solves `COUNT` emitters of the largest well
-one by one, each with its own sparse factorisation of the whole well.
+one by one, each with its own sparse factorisation of the whole well;
+``python tests/bench/peers.py nets LAYOUT`` flattens the layout, asks one `shapely.STRtree` which
+shapes touch and networkx what hangs together; ``pairs`` instead of ``nets`` asks every pair.
 """
 
 from __future__ import annotations
@@ -11,14 +13,17 @@ import itertools
 import json
 import sys
 import time
+from collections.abc import Iterator
 from pathlib import Path
 
 import gdstk
+import networkx
 import numpy as np
 import scipy.sparse
 import scipy.sparse.linalg
 import shapely
-from generators import ACTIVE, N_WELL, P_IMPLANT, POLY
+from generators import ACTIVE, N_WELL, P_IMPLANT
+from wiring import CONTACT, METALS, POLY, VIAS
 
 from latchscan.constants import REFERENCE_TEMPERATURE_K
 from latchscan.layout.bodies import assemble_layout
@@ -120,8 +125,65 @@ def wells_one_by_one(path: Path, count: int) -> dict[str, object]:
     }
 
 
+def conductors_and_joins(path: Path) -> tuple[np.ndarray, np.ndarray]:
+    """Every shape that conducts as a polygon [nm], and its place in the stack.
+
+    Places: diffusion 0, poly 1, metals 2 to 8, then contacts 9 and vias 10 to 15.
+    """
+    (top,) = gdstk.read_gds(path).top_level()
+
+    def drawn(pair: tuple[int, int]) -> np.ndarray:
+        shapes = top.get_polygons(layer=pair[0], datatype=pair[1])
+        found = [shapely.Polygon(np.rint(shape.points * 1000.0)) for shape in shapes]
+        return np.array(found, dtype=np.object_)
+
+    active, poly = shapely.get_parts(shapely.union_all(drawn(ACTIVE))), drawn(POLY)
+    rows, gates = shapely.STRtree(poly).query(active, predicate="intersects")
+    starts = np.searchsorted(rows, np.arange(len(active) + 1))
+    diffusion = [
+        shapely.difference(shape, shapely.union_all(poly[gates[starts[i] : starts[i + 1]]]))
+        for i, shape in enumerate(active)
+    ]
+    sorts = [shapely.get_parts(np.array(diffusion, dtype=np.object_)), poly]
+    sorts += [drawn(pair) for pair in (*METALS, CONTACT, *VIAS)]
+    return np.concatenate(sorts), np.repeat(np.arange(len(sorts)), [len(sort) for sort in sorts])
+
+
+def joined_places() -> Iterator[tuple[int, int]]:
+    """Places of the stack whose shapes are one where they touch."""
+    yield from ((place, place) for place in range(16))
+    yield from ((place, 9) for place in (0, 1, 2))
+    yield from ((2 + via + step, 10 + via) for via in range(6) for step in (0, 1))
+
+
+def nets_by_touch(path: Path, *, every_pair: bool) -> dict[str, float]:
+    """Nets that hold a diffusion, from all pairs of shapes that touch.
+
+    Seconds are those of the processor, reading included.
+    """
+    start = time.process_time()
+    shapes, place = conductors_and_joins(path)
+    graph = networkx.Graph()
+    graph.add_nodes_from(range(len(shapes)))
+    for one, other in joined_places():
+        rows, others = np.flatnonzero(place == one), np.flatnonzero(place == other)
+        if every_pair:
+            for row in rows.tolist():
+                touched = others[shapely.intersects(shapes[row], shapes[others])]
+                graph.add_edges_from((row, beside) for beside in touched.tolist())
+        else:
+            found = shapely.STRtree(shapes[others]).query(shapes[rows], predicate="intersects")
+            pairs = np.column_stack([rows[found[0]], others[found[1]]])
+            graph.add_edges_from(pairs.tolist())
+    diffusions = int((place == 0).sum())
+    nets = sum(min(part) < diffusions for part in networkx.connected_components(graph))
+    return {"seconds": time.process_time() - start, "nets": nets, "shapes": len(shapes)}
+
+
 if __name__ == "__main__":
     if sys.argv[1] == "union":
         print(json.dumps(union_per_layer(Path(sys.argv[2]))))
+    elif sys.argv[1] in ("nets", "pairs"):
+        print(json.dumps(nets_by_touch(Path(sys.argv[2]), every_pair=sys.argv[1] == "pairs")))
     else:
         print(json.dumps(wells_one_by_one(Path(sys.argv[2]), int(sys.argv[3]))))

@@ -203,7 +203,7 @@ def test_colour_only_on_a_terminal_that_wants_it(monkeypatch: pytest.MonkeyPatch
 
 def test_version_and_help() -> None:
     assert started("--version").stdout == f"latchscan {__version__}\n"
-    for arguments in ((), ("scan",), ("tech",), ("tech", "check")):
+    for arguments in ((), ("scan",), ("tech",), ("tech", "check"), ("block",)):
         shown = started(*arguments, "--help")
         assert shown.returncode == 0
         assert "latchscan" in shown.stdout

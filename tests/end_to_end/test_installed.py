@@ -38,7 +38,7 @@ def installed(repository: Path, tmp_path_factory: pytest.TempPathFactory) -> Pat
 def test_scan_by_shipped_name(installed: Path, tmp_path: Path) -> None:
     sample = installed / "latchscan" / "shipped" / "samples" / "valve_driver.gds"
     command = [sys.executable, "-m", "latchscan", "scan", str(sample), "--tech", "larch180"]
-    window = ["--window", "370", "205", "435", "255"]
+    window = ["--window", "421", "180", "475", "220"]
     done = run([*command, *window, "--out", "out", "--jobs", "1"], tmp_path, installed)
     assert done.returncode == 1, done.stderr
     assert "loop-gain" in done.stdout

@@ -8,8 +8,10 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner
 
+from latchscan.block.check import check_block
 from latchscan.cli import commands
 from latchscan.rules import RULES
+from latchscan.technology.check import check_technology
 
 
 @pytest.fixture(scope="module")
@@ -30,9 +32,22 @@ def test_every_rule_is_in_the_table(readme: str) -> None:
 
 
 def test_every_option_of_the_scan_is_told(readme: str) -> None:
-    told = set(re.findall(r"(--[a-z]+)", readme))
+    told = set(re.findall(r"(--[a-z-]+)", readme))
     options = {option for one in commands.commands["scan"].params for option in one.opts}
     assert {option for option in options if option.startswith("--")} <= told | {"--help"}
+
+
+def test_the_block_file_that_is_shown_has_no_problem(readme: str) -> None:
+    (shown,) = re.findall(r"^```yaml\n(format: latchscan-block.*?)^```", readme, re.S | re.M)
+    assert check_block(shown, "block.yaml") == []
+
+
+def test_the_conductors_that_are_shown_have_no_problem(readme: str, repository: Path) -> None:
+    (shown,) = re.findall(r"^```yaml\n(conductors:.*?)^```", readme, re.S | re.M)
+    shipped = (repository / "techfiles" / "larch180.yaml").read_text()
+    whole = re.sub(r"^conductors:.*?(?=^[a-z])", lambda _: shown + "\n", shipped, flags=re.S | re.M)
+    assert shown in whole
+    assert check_technology(whole, "my_process.yaml") == []
 
 
 def test_both_commands_are_those_that_are_tested(readme: str, repository: Path) -> None:

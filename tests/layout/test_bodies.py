@@ -18,6 +18,7 @@ from latchscan.layout.model import (
 )
 from latchscan.layout.regions import derive_regions
 from latchscan.tasks import Workers
+from latchscan.technology.load import load_technology
 
 SIDE = 40_000
 
@@ -240,20 +241,28 @@ def test_over_buried_goes_by_most_of_the_area(edge, over):
     assert found.emitters.over_buried.tolist() == [over]
 
 
-def test_pins_and_markers_make_injectors_and_supplies_do_not():
+@pytest.mark.parametrize(
+    ("keep", "expected"),
+    [(False, ["PAD_A", "", "", "", "marker", ""]), (True, ["", "", "", "", "marker", ""])],
+)
+def test_pins_and_markers_make_injectors_and_supplies_do_not(keep, expected):
     def text(name, x_um):
         return Label(text=name, layer=60, texttype=0, x_um=x_um, y_um=3.0)
 
+    tech = technology()
+    # with conductors it is nets that tell a pin's diffusions, and only markers stand here
+    conductors = load_technology("larch180").technology.conductors if keep else None
     found = layout(
         {
             "active": [rectangle(1000 + 4000 * i, 2000, 3000 + 4000 * i, 4000) for i in range(6)],
             "nplus": [rectangle(0, 0, SIDE, SIDE)],
             "marker": [rectangle(17_500, 0, 19_000, SIDE), rectangle(23_000, 0, 24_000, SIDE)],
         },
+        tech=tech.model_copy(update={"conductors": conductors}),
         texts=[text("PAD_A", 2.0), text("VSS", 6.0), text("vddio", 10.0), text("PAD_B", 12.0)],
     )
     # PAD_B lies beside the third diffusion; the last marker only touches the sixth
-    assert found.emitters.injector.tolist() == ["PAD_A", "", "", "", "marker", ""]
+    assert found.emitters.injector.tolist() == expected
 
 
 @pytest.mark.parametrize("seed", [11, 12, 13])

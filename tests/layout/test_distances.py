@@ -366,6 +366,16 @@ def test_reach_in_a_regular_field_by_hand() -> None:
     assert found.at_um[0] == pytest.approx([0.4, 0.4], abs=1e-9)
 
 
+def test_a_small_group_does_not_lend_its_targets_to_a_large_one() -> None:
+    """By hand: the bar's farthest point is 38 um from its only target, whoever stands around."""
+    shapes = np.array([shapely.box(0, 0, 1, 1), shapely.box(0, 10, 40, 11)])
+    targets = np.array([shapely.box(0, 0, 1, 1), shapely.box(38, 10, 40, 11)])
+    found = farthest_points(shapes, np.array([0, 1]), targets, np.array([0, 1]))
+    assert found.distance_um.tolist() == [0.0, 38.0]
+    assert found.at_um[1].tolist() == [0.0, 10.0]
+    assert found.nearest_um[1].tolist() == [38.0, 10.0]
+
+
 def test_many_groups_far_apart_do_not_see_each_other() -> None:
     # by hand: every group is a bar of 4 um with a tap 1 um beyond its right end
     k = np.arange(400)

@@ -41,6 +41,43 @@ def test_order_survives_colour_blindness(kind: str) -> None:
     assert all(light > 1.15 * dark for light, dark in itertools.pairwise(seen))
 
 
+def oklab(light: np.ndarray) -> np.ndarray:
+    """OKLab of linear light (B. Ottosson, 2020, the published matrices)."""
+    cones = np.array(
+        [
+            [0.4122214708, 0.5363325363, 0.0514459929],
+            [0.2119034982, 0.6806995451, 0.1073969566],
+            [0.0883024619, 0.2817188376, 0.6299787005],
+        ]
+    )
+    opponent = np.array(
+        [
+            [0.2104542553, 0.7936177850, -0.0040720468],
+            [1.9779984951, -2.4285922050, 0.4505937099],
+            [0.0259040371, 0.7827717662, -0.8086757660],
+        ]
+    )
+    return opponent @ np.cbrt(np.clip(cones @ light, 0.0, None))
+
+
+@pytest.mark.parametrize("kind", ["all colours", *DICHROMATS])
+def test_inks_of_the_marks_can_be_told_apart(kind: str) -> None:
+    seen = np.array(DICHROMATS.get(kind, np.eye(3)))
+    inks = [
+        oklab(seen @ linear(palette.parse_hex(ink)))
+        for ink in (
+            palette.INK,
+            palette.INJECTOR_INK,
+            palette.RING_INK,
+            palette.PIN_INK,
+            palette.HIGHLIGHT,
+        )
+    ]
+    # 0.02 is a just noticeable difference in OKLab (from memory); thin lines need several
+    nearest = min(float(np.linalg.norm(a - b)) for a, b in itertools.combinations(inks, 2))
+    assert nearest > 0.1
+
+
 @pytest.mark.parametrize(
     ("ink", "ground"),
     [
@@ -48,6 +85,8 @@ def test_order_survives_colour_blindness(kind: str) -> None:
         (palette.FAINT_INK, palette.PAPER),
         (palette.FAINT_INK, palette.WELL_FILL),
         (palette.INJECTOR_INK, palette.PAPER),
+        (palette.RING_INK, palette.PAPER),
+        (palette.PIN_INK, palette.PAPER),
         (palette.WATCH_INK, palette.PAPER),
         (palette.PAPER, palette.FAIL_INK),
     ],

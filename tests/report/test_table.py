@@ -15,7 +15,7 @@ from latchscan.rules.model import Evidence
 HEADER = (
     "id,kind,body,x0_um,y0_um,x1_um,y1_um,area_um2,tap_distance_um,tap_distance_x_um,"
     "tap_distance_y_um,self_resistance_ohm,self_resistance_max_ohm,patch_resistance_ohm,"
-    "resistance_error"
+    "resistance_error,net,injector,injector_resistance_ohm"
 )
 
 
@@ -56,6 +56,37 @@ def test_a_missing_measure_is_empty_and_an_unbounded_one_says_so(measured: Evide
     untied = next(row for row in rows if row["body"] == "nwell-2")
     assert untied["tap_distance_um"] == ""
     assert untied["self_resistance_ohm"] == "inf"
+
+
+def test_nets_and_injectors_of_the_emitters() -> None:
+    connected = synthetic_scan.evidence(connected=True)
+    text = emitters_csv(connected).decode("utf-8")
+    rows = {row["id"]: row for row in csv.DictReader(io.StringIO(text))}
+    columns = ("net", "injector", "injector_resistance_ohm")
+    # as `synthetic_connections` says
+    assert tuple(rows["n-1"][column] for column in columns) == ("net-1", "drive", "0.0000")
+    assert tuple(rows["n-47"][column] for column in columns) == ("net-5", "sense", "250.0000")
+    assert tuple(rows["n-2"][column] for column in columns) == ("net-2", "", "")
+    assert rows["p-2"]["net"] == "net-3"
+
+
+def test_of_two_ways_to_an_emitter_the_shorter_counts() -> None:
+    connected = synthetic_scan.evidence(connected=True)
+    injectors = connected.connections.injectors
+    emitter = np.full_like(injectors.emitter, injectors.emitter[0])
+    ohm = np.array([np.nan, 30.0, 20.0, 40.0, np.nan, 50.0, 60.0, 70.0])
+    changed = synthetic_scan.changed(
+        connected, "connections.injectors", emitter=emitter, resistance_ohm=ohm
+    )
+    rows = csv.DictReader(io.StringIO(emitters_csv(changed).decode("utf-8")))
+    found = {row["id"]: row["injector_resistance_ohm"] for row in rows}
+    assert {name: ohm for name, ohm in found.items() if ohm} == {"n-1": "20.0000"}
+
+
+def test_without_nets_the_columns_are_empty(measured: Evidence) -> None:
+    rows = list(csv.DictReader(io.StringIO(emitters_csv(measured).decode("utf-8"))))
+    assert {row["net"] for row in rows} == {""}
+    assert {row["injector"] for row in rows} == {"", "drive"}
 
 
 @pytest.mark.parametrize("text", ["=1+1", "+1", "-1", "@x", "\t=1", "\r=1"])

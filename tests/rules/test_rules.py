@@ -5,25 +5,27 @@ The expected values are the ones planted here by hand; there is no outside sourc
 
 from __future__ import annotations
 
-from typing import Any
-
 import numpy as np
 import pytest
 import synthetic_scan
+from synthetic_scan import ALL_OFF, findings_of
 
 from latchscan.layout.model import P_IN_NWELL
 from latchscan.rules import RULES, judge
-from latchscan.rules.model import Evidence, Finding
+from latchscan.rules.breaks import place
+from latchscan.rules.model import Evidence
 
-ALL_OFF = {name.replace("-", "_"): {"severity": "off"} for name in RULES}
-
-
-def findings_of(rule: str, measured: Evidence, **limits: float) -> tuple[Finding, ...]:
-    """Findings of one rule, with its limits replaced; untied bodies are reported as well."""
-    rules: dict[str, dict[str, Any]] = {**ALL_OFF, "untied_body": {"severity": "watch"}}
-    rules[rule.replace("-", "_")] = {"severity": "fail", **limits}
-    found = judge(measured, synthetic_scan.technology(**rules))
-    return tuple(one for one in found if one.rule == rule)
+OF_SHAPES = (
+    "untied-body",
+    "loop-gain",
+    "tap-distance",
+    "injector-spacing",
+    "tap-reach",
+    "well-resistance",
+    "uncontacted-tap",
+)
+"""Rules that need no nets; the synthetic block breaks all but ``tap-reach``."""
+LOWER_IS_WORSE = ("injector-spacing", "well-spacing", "ring-width", "ring-contacts")
 
 
 @pytest.fixture(name="measured")
@@ -166,7 +168,9 @@ def test_a_measure_that_is_not_known_never_passes(
     assert "could not be" in found.message
 
 
-def test_findings_are_sorted_numbered_and_can_be_switched_off(measured: Evidence) -> None:
+@pytest.mark.parametrize("connected", [False, True])
+def test_findings_are_sorted_numbered_and_can_be_switched_off(connected: bool) -> None:
+    measured = synthetic_scan.evidence(connected=connected)
     found = judge(measured, synthetic_scan.technology())
     severities = [one.severity for one in found]
     assert severities == sorted(severities, key=("fail", "watch").index)
@@ -177,14 +181,23 @@ def test_findings_are_sorted_numbered_and_can_be_switched_off(measured: Evidence
     for rule in RULES:
         own = [one for one in found if one.rule == rule]
         assert [one.id for one in own] == [f"{rule}-{i + 1}" for i in range(len(own))]
-        badness = [one.measured / one.limit for one in own]
-        assert badness == sorted(badness, reverse=rule != "injector-spacing")
+        badness = [one.measured - one.limit for one in own]
+        assert badness == sorted(badness, reverse=rule not in LOWER_IS_WORSE)
     assert judge(measured, synthetic_scan.technology(**ALL_OFF)) == ()
 
 
-def test_every_message_is_one_sentence_with_measure_and_limit(measured: Evidence) -> None:
+def test_a_block_without_nets_has_no_finding_about_them() -> None:
+    found = judge(synthetic_scan.evidence(), synthetic_scan.technology())
+    assert {one.rule for one in found} == {*OF_SHAPES} - {"tap-reach"}
+
+
+@pytest.mark.parametrize("connected", [False, True])
+def test_every_message_is_one_sentence_with_place_measure_and_limit(connected: bool) -> None:
+    measured = synthetic_scan.evidence(connected=connected)
     for one in judge(measured, synthetic_scan.technology()):
         assert "\n" not in one.message
         assert one.message.endswith(".")
         assert f"{one.limit:g}" in one.message
         assert one.subject in one.message
+        assert place(one.x_um, one.y_um) in one.message
+        assert any(f"{one.measured:{form}}" in one.message for form in ("g", ".3f", ".3g", ".4g"))

@@ -9,11 +9,11 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
+from planted_text import plant
 
 from latchscan.technology.check import check_technology, validate
 from latchscan.technology.problem import Problem
 
-MARK = "§"
 PLANTED: list[tuple[str, str, str, str, str]] = [
     # what, text that is replaced, by what, key, part of the message
     ("unknown key", "\nwells:", "\n§well:\n  {}\nwells:", "well", "unknown key, expected `wells`"),
@@ -426,15 +426,15 @@ PLANTED: list[tuple[str, str, str, str, str]] = [
     (
         "layer with an operator's name",
         'via1: {gds: ["22/0"]}',
-        '§grow: {gds: ["22/0"]}',
+        'via1: {gds: ["22/0"]}\n  §grow: {gds: ["99/0"]}',
         "layers.grow",
         "`grow` is a word of expressions",
     ),
     (
         "layer name with capitals",
         'via1: {gds: ["22/0"]}',
-        '§Via1: {gds: ["22/0"]}',
-        "layers.Via1",
+        'via1: {gds: ["22/0"]}\n  §Via9: {gds: ["99/0"]}',
+        "layers.Via9",
         "not a usable name",
     ),
     (
@@ -451,16 +451,6 @@ PLANTED: list[tuple[str, str, str, str, str]] = [
 @pytest.fixture(scope="module")
 def larch(repository: Path) -> str:
     return (repository / "techfiles" / "larch180.yaml").read_text()
-
-
-def plant(text: str, old: str, new: str) -> tuple[str, int, int]:
-    """Text with the fault, and the line and column of the mark; 0, 0 without a mark."""
-    assert text.count(old) == 1, f"{old!r} stands {text.count(old)} times"
-    marked = text.replace(old, new)
-    before, mark, _ = marked.partition(MARK)
-    if not mark:
-        return marked, 0, 0
-    return marked.replace(MARK, ""), before.count("\n") + 1, len(before.rpartition("\n")[2]) + 1
 
 
 @pytest.mark.parametrize(
@@ -497,7 +487,7 @@ def test_all_faults_together_are_all_found(larch: str) -> None:
         ("supply_v: 1.8", "supply_v: 1e0"),
         ("back_side: floating", "back_side: up"),
         ("nwell_doping_cm3:", "nwell_doping_m3:"),
-        ("not poly", "not polly"),
+        ("not poly\n\nroles", "not polly\n\nroles"),
         ("max_gain: 1.0", "max_gain: 0"),
     ]
     for old, new in faults:

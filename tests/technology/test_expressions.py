@@ -94,7 +94,7 @@ def test_precedence_is_that_of_python(text: str) -> None:
         ("", 1, "expected a name, `not`, `(` or a function, got the end"),
         ("a and", 6, "got the end"),
         ("a b", 3, "expected `and` or `or` before `b`"),
-        ("a not b", 3, "expected `not` in small letters between two names"),
+        ("a not b", 3, "expected `and` or `or` before `not`"),
         ("a AND b", 3, "expected `and` in small letters"),
         ("a & b", 3, "expected a word such as `and`"),
         ("a | b", 3, "expected a word such as `or`"),

@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+import copy
 import json
+from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
+import yaml
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -92,3 +96,35 @@ def test_any_value_in_any_place(index: int, value: object) -> None:
     key = lines[index].split(":")[0]
     lines[index] = f"{key}: {json.dumps(value)}\n"
     checked("".join(lines))
+
+
+START, END = LARCH.index("\nconductors:\n"), LARCH.index("\nwells:\n")
+WIRING = yaml.safe_load(LARCH[START:END].replace("on:", '"on":'))
+
+
+def places(part: Any, where: tuple[Any, ...] = ()) -> Iterator[tuple[Any, ...]]:
+    """Keys and list places from the top to every value inside."""
+    inside = part.items() if isinstance(part, dict) else enumerate(part)
+    for key, value in inside:
+        yield (*where, key)
+        if isinstance(value, (dict, list)):
+            yield from places(value, (*where, key))
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.sampled_from(list(places(WIRING))), st.sampled_from(["change", "drop", "rename"]), VALUES)
+def test_any_value_in_the_wiring(where: tuple[Any, ...], how: str, value: object) -> None:
+    """Inside every mapping and list of the conductors and of the search for rings."""
+    data = copy.deepcopy(WIRING)
+    *above, last = where
+    holder = data
+    for key in above:
+        holder = holder[key]
+    if how == "rename" and isinstance(holder, dict):
+        holder[str(value)] = holder.pop(last)
+    elif how == "change":
+        holder[last] = value
+    else:
+        del holder[last]
+    parts = "".join(f"\n{key}: {json.dumps(part)}" for key, part in data.items())
+    checked(LARCH[:START] + parts + "\n" + LARCH[END:])

@@ -20,13 +20,27 @@ from latchscan.technology.schema import technology_schema
 SHIPPED = ("larch180", "open130")
 
 
+class Yaml12(yaml.SafeLoader):
+    """YAML as editors read it since version 1.2: `on` and `off` are text, not booleans."""
+
+
+Yaml12.yaml_implicit_resolvers = {
+    first: [(tag, form) for tag, form in forms if not (tag.endswith("bool") and first in "oOyYnN")]
+    for first, forms in yaml.SafeLoader.yaml_implicit_resolvers.items()
+}
+
+
+def data_of(text: str) -> Any:
+    return yaml.load(text, Loader=Yaml12)
+
+
 def text_of(repository: Path, name: str) -> str:
     return (repository / "techfiles" / f"{name}.yaml").read_text()
 
 
 def accepts(text: str) -> bool:
     schema = technology_schema()
-    return bool(jsonschema.Draft202012Validator(schema).is_valid(yaml.safe_load(text)))
+    return bool(jsonschema.Draft202012Validator(schema).is_valid(data_of(text)))
 
 
 def test_schema_is_one() -> None:
@@ -39,7 +53,7 @@ def test_schema_is_one() -> None:
 @pytest.mark.parametrize("name", SHIPPED)
 def test_shipped_files_are_valid(repository: Path, name: str) -> None:
     text = text_of(repository, name)
-    jsonschema.Draft202012Validator(technology_schema()).validate(yaml.safe_load(text))
+    jsonschema.Draft202012Validator(technology_schema()).validate(data_of(text))
     assert check_technology(text, name) == []
 
 
@@ -61,6 +75,17 @@ def test_shipped_files_are_valid(repository: Path, name: str) -> None:
         ("  buried: deep_nwell", "  buried: 3"),
         ("  untied-body: {", "  untied: {"),
         ("format_version: 1", "format_version: 2"),
+        ("metal1, sheet_resistance_ohm_sq: 0.08", "metal1, sheet_resistance_ohm_sq: 8.0e+7"),
+        ("metal1, sheet_resistance_ohm_sq: 0.08", "metal1, texts: [text]"),
+        ("    metal1: {shape: metal1,", "    metal1: {"),
+        ("kind: poly", "kind: polly"),
+        ("joins: [metal1, metal2]", "joins: [metal1]"),
+        ("on: metal4", "onto: metal4"),
+        ("  pads: {shape: pad, on", "  pad: {shape: pad, on"),
+        ("least_coverage: 0.5", "least_coverage: 50"),
+        ("min_share: 0.5", "min_share: 50"),
+        ("n_injector: [majority]", "n_injector: [double]"),
+        ("ring-gap: {severity: fail, max_um: 0.0}", "ring-gap: {severity: fail, max_um: -1.0}"),
     ],
 )
 def test_schema_and_check_refuse_the_same(repository: Path, old: str, new: str) -> None:

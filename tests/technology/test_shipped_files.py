@@ -6,6 +6,7 @@ specification (revision 1.2) of the open-source PDK SG13G2, as listed beside eac
 
 from __future__ import annotations
 
+import fnmatch
 import math
 from pathlib import Path
 
@@ -28,7 +29,8 @@ def larch180() -> Technology:
 
 def test_every_number_of_open130_has_a_source_or_is_an_assumption(open130: Technology) -> None:
     found = dict(open130.quantities())
-    assert len(found) == 6 + 4 + 5 + 7  # wells, substrate, the two transistors; counted by hand
+    # wells, substrate, the two transistors; conductors, connections, resistors: counted by hand
+    assert len(found) == 6 + 4 + 5 + 7 + 9 + 7 + 2 * 3
     assert found["substrate.layers[0].thickness_um"].assumption
     for where, quantity in found.items():
         assert bool(quantity.source) != quantity.assumption, where
@@ -51,6 +53,49 @@ def test_published_numbers_of_open130(open130: Technology) -> None:
     assert open130.rules.tap_distance.p_diffusion_max_um == 20.0
     assert open130.rules.tap_distance.n_diffusion_max_um == 20.0
     assert open130.rules.tap_reach.max_um == 6.0
+    conductors = open130.conductors
+    assert conductors is not None
+    metals = {name: c for name, c in conductors.layers.items() if c.kind == "metal"}
+    assert {name: metal.sheet_resistance_ohm_sq.typical for name, metal in metals.items()} == {
+        "metal1": 0.110,
+        **dict.fromkeys(("metal2", "metal3", "metal4", "metal5"), 0.088),
+        "top_metal1": 0.018,
+        "top_metal2": 0.011,
+    }
+    for name in ("via1", "via2", "via3"):
+        assert members(conductors.connections[name].resistance_ohm) == (5.0, 9.0, 20.0)
+    assert members(conductors.connections["contact"].resistance_ohm) == (8.0, 17.0, 22.0)
+
+
+def test_texts_of_open130(open130: Technology) -> None:
+    """Layer table of the layout rules, revision 0.4: label 1 of metal 1, text 25 of all metals."""
+    assert open130.conductors is not None
+    layers = open130.conductors.layers
+    assert layers["metal1"].texts == ("8/25", "8/1")
+    for name in ("metal2", "metal3", "metal4", "metal5", "top_metal1", "top_metal2"):
+        assert layers[name].texts == (open130.layers[name].gds[0].replace("/0", "/25"),)
+
+
+def test_remarks_of_open130(open130: Technology) -> None:
+    """The texts that stand on the PDK's own device cells, and names that nets may have."""
+
+    def is_remark(text: str) -> bool:
+        patterns = open130.labels.remark_names
+        return any(fnmatch.fnmatchcase(text.lower(), pattern.lower()) for pattern in patterns)
+
+    on_devices = ("sub!", "Ae=1*1*0.07*0.90", "c=74.620f", "C=74.832f", "r=1m", "layer=M1")
+    names_of_devices = (
+        "dant",
+        "diodevdd_2kv",
+        "diodevss_4kv",
+        "nmoscl_2",
+        "scr1",
+        "npn13G2",
+        "rfpmosHV",
+    )
+    assert all(map(is_remark, (*on_devices, *names_of_devices)))
+    names_of_pins = ("VDD", "VSS", "PAD", "A", "Q_N", "TIE", "PLUS", "MINUS", "sub", "nmos_gate")
+    assert not any(map(is_remark, names_of_pins))
 
 
 def test_measured_gain_of_open130(open130: Technology) -> None:
@@ -91,7 +136,7 @@ def test_layers_of_open130(open130: Technology) -> None:
         "boundary": "189/4",
     }
     assert {name: open130.layers[name].gds[0] for name in drawn} == drawn
-    assert open130.labels.layers == ("63/0", "8/25")
+    assert open130.labels.layers == ("63/0",)
 
 
 POINTS = {
@@ -124,6 +169,50 @@ def covered(technology: Technology, text: str, drawn: set[str]) -> bool:
         derived = technology.derived.get(name)
         names[name] = name in drawn if derived is None else covered(technology, derived, drawn)
     return bool(eval(text, {"__builtins__": {}}, names))
+
+
+CONDUCTING = {
+    # name: file, drawn layers over the point, conductors and resistors there
+    "diffusion": ("larch180", {"active", "nplus"}, {"diffusion"}),
+    "well tap": ("larch180", {"active", "nplus", "nwell"}, {"diffusion"}),
+    "gate": ("larch180", {"active", "poly"}, {"poly"}),
+    "poly resistor": ("larch180", {"poly", "resistor_marker"}, {"poly_resistor"}),
+    "poly resistor over a diffusion": (
+        "larch180",
+        {"active", "poly", "resistor_marker"},
+        {"poly_resistor"},
+    ),
+    "diffusion resistor": ("larch180", {"active", "resistor_marker"}, {"diffusion_resistor"}),
+    "well resistor": ("larch180", {"nwell", "well_resistor_marker"}, {"well_resistor"}),
+    "its head": (
+        "larch180",
+        {"nwell", "well_resistor_marker", "active", "nplus"},
+        {"well_resistor", "diffusion"},
+    ),
+    "marker over nothing": ("larch180", {"resistor_marker", "well_resistor_marker"}, set()),
+    "metal under a pad": ("larch180", {"metal4", "pad"}, {"metal4"}),
+    "open gate": ("open130", {"active", "poly"}, {"poly"}),
+    "head of rsil": ("open130", {"poly"}, {"poly"}),
+    "rsil": ("open130", {"poly_resistor", "resistor_recognition"}, {"rsil"}),
+    "rppd": ("open130", {"poly_resistor", "salicide_block", "pplus"}, {"rppd"}),
+    "rhigh": (
+        "open130",
+        {"poly_resistor", "salicide_block", "pplus", "nplus_drawn"},
+        {"rhigh"},
+    ),
+    "body drawn on poly too": ("open130", {"poly", "poly_resistor"}, {"rsil"}),
+    "blocked salicide alone": ("open130", {"poly", "salicide_block"}, {"poly"}),
+    "top metal": ("open130", {"top_metal2", "passivation", "pad_recognition"}, {"top_metal2"}),
+}
+
+
+@pytest.mark.parametrize(("file", "drawn", "names"), CONDUCTING.values(), ids=CONDUCTING)
+def test_what_conducts_where(file: str, drawn: set[str], names: set[str]) -> None:
+    """Bodies of resistors part their conductor, so no point is in both; from the files' plan."""
+    technology = load_technology(file).technology
+    assert technology.conductors is not None
+    shapes = {**technology.conductors.layers, **technology.conductors.resistors}
+    assert {n for n, part in shapes.items() if covered(technology, part.shape, drawn)} == names
 
 
 @pytest.mark.parametrize(("drawn", "roles"), POINTS.values(), ids=POINTS)

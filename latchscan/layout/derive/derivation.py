@@ -76,7 +76,7 @@ class Program:
     regions
         Region name -> step.
     contact
-        The step of the contacts.
+        The step of the contacts, -1 where they are plain layers or not asked for.
     contact_layers
         Layers whose shapes are the contacts, where the expression is no more than that.
     margin_um
@@ -170,35 +170,64 @@ def compile_program(technology: Technology) -> Program:
     TechnologyError
         If an expression cannot be read (a checked technology has none).
     """
-    derived = {name: parse_expression(text) for name, text in technology.derived.items()}
+    roles = {name: getattr(technology.roles, name) for name in DRAWN_REGIONS}
+    return _compiled(
+        technology,
+        {name: text for name, text in roles.items() if text is not None},
+        technology.roles.contact,
+    )
+
+
+def compile_expressions(technology: Technology, expressions: Mapping[str, str]) -> Program:
+    """The steps of any expressions by name, without contacts.
+
+    Raises
+    ------
+    TechnologyError
+        If an expression cannot be read (a checked technology has none).
+    """
+    return _compiled(technology, expressions, None)
+
+
+def _compiled(
+    technology: Technology, expressions: Mapping[str, str], contact_text: str | None
+) -> Program:
+    derived = derived_expressions(technology)
     builder = _Builder(derived)
-    regions = []
-    for name in DRAWN_REGIONS:
-        text = getattr(technology.roles, name)
-        if text is not None:
-            regions.append((name, builder.add(parse_expression(text), wide=False)))
-    contact = parse_expression(technology.roles.contact)
-    contact_layers = _plain_layers(contact, derived)
-    index = builder.add(contact, wide=True) if not contact_layers else -1
+    regions = tuple(
+        (name, builder.add(parse_expression(text), wide=False))
+        for name, text in expressions.items()
+    )
+    contact_layers: tuple[str, ...] = ()
+    index = -1
+    if contact_text is not None:
+        contact = parse_expression(contact_text)
+        contact_layers = plain_layers(contact, derived)
+        index = builder.add(contact, wide=True) if not contact_layers else -1
     steps = tuple(builder.steps)
     return Program(
         steps=steps,
-        regions=tuple(regions),
+        regions=regions,
         contact=index,
         contact_layers=contact_layers,
         margin_um=max((_reach_um(steps, i) for i in range(len(steps))), default=0.0),
     )
 
 
-def _plain_layers(expression: Expression, derived: Mapping[str, Expression]) -> tuple[str, ...]:
+def derived_expressions(technology: Technology) -> dict[str, Expression]:
+    """The technology's derived names and what they stand for."""
+    return {name: parse_expression(text) for name, text in technology.derived.items()}
+
+
+def plain_layers(expression: Expression, derived: Mapping[str, Expression]) -> tuple[str, ...]:
     """Layers of an expression that is one layer or an ``or`` of layers, else none."""
     match expression:
         case Name(name) if name in derived:
-            return _plain_layers(derived[name], derived)
+            return plain_layers(derived[name], derived)
         case Name(name):
             return (name,)
         case Or(items):
-            parts = [_plain_layers(item, derived) for item in items]
+            parts = [plain_layers(item, derived) for item in items]
             return tuple(sorted({n for part in parts for n in part})) if all(parts) else ()
         case _:
             return ()

@@ -22,7 +22,7 @@ from pathlib import Path
 from typing import IO
 
 from latchscan.errors import LayoutError
-from latchscan.layout.file.tables import Pair, Tables, load_tables
+from latchscan.layout.file.tables import Pair, TablesFolder
 
 LARGEST_UNPACKED_BYTES = 4 << 30
 """Largest size a gzipped layout may unpack to."""
@@ -67,8 +67,10 @@ def _reason(error: OSError) -> str:
     return f"cannot be read: {error.strerror or error}"
 
 
-def read_layout(path: Path, *, shape_pairs: list[Pair], text_pairs: list[Pair]) -> Tables:
+def read_layout(path: Path, *, shape_pairs: list[Pair], text_pairs: list[Pair]) -> TablesFolder:
     """Read a GDSII or OASIS file, gzipped or not, in a guarded child process.
+
+    The tables are left in a folder of their own, see `load_tables`.
 
     Parameters
     ----------
@@ -85,8 +87,13 @@ def read_layout(path: Path, *, shape_pairs: list[Pair], text_pairs: list[Pair]) 
     try:
         with tempfile.TemporaryDirectory(prefix="latchscan-") as folder:
             plain = _unpacked(path, Path(folder))
-            kind = _kind(path, plain)
-            return _read_in_child(path, plain, kind, Path(folder), shape_pairs, text_pairs)
+            job: dict[str, object] = {
+                "path": str(plain.resolve()),
+                "kind": _kind(path, plain),
+                "shape_pairs": shape_pairs,
+                "text_pairs": text_pairs,
+            }
+            return _read_in_child(path, job, Path(folder), plain.stat().st_size)
     except OSError as error:
         raise LayoutError(f"{path}: {_reason(error)}", hint=HINT) from None
 
@@ -137,26 +144,21 @@ def _kind_of_bytes(path: Path, start: bytes) -> str:
     raise LayoutError(f"{path}: this is neither a GDSII nor an OASIS file", hint=HINT)
 
 
-def _read_in_child(
-    path: Path,
-    plain: Path,
-    kind: str,
-    folder: Path,
-    shape_pairs: list[Pair],
-    text_pairs: list[Pair],
-) -> Tables:
-    size = plain.stat().st_size
-    job = {
-        "path": str(plain.resolve()),
-        "kind": kind,
-        "shape_pairs": shape_pairs,
-        "text_pairs": text_pairs,
-        "out": str(folder / "tables.npz"),
-        "memory_bytes": MEMORY_BASE_BYTES + MEMORY_PER_FILE_BYTE * size,
-    }
+def _read_in_child(path: Path, job: dict[str, object], folder: Path, size: int) -> TablesFolder:
+    out = TablesFolder()
+    try:
+        job["out"] = str(out.path)
+        job["memory_bytes"] = MEMORY_BASE_BYTES + MEMORY_PER_FILE_BYTE * size
+        _run_child(path, job, folder, SECONDS_BASE + SECONDS_PER_MEGABYTE * size / 1e6)
+    except BaseException:
+        out.remove()
+        raise
+    return out
+
+
+def _run_child(path: Path, job: dict[str, object], folder: Path, seconds: float) -> None:
     order = folder / "job.json"
     order.write_text(json.dumps(job), encoding="utf-8")
-    seconds = SECONDS_BASE + SECONDS_PER_MEGABYTE * size / 1e6
     try:
         done = subprocess.run(
             [sys.executable, "-P", "-m", "latchscan.layout.file.reading", str(order)],
@@ -178,7 +180,6 @@ def _read_in_child(
         raise LayoutError(f"{path}: its reader could not be started: {error.strerror}") from None
     if done.returncode != 0:
         raise LayoutError(f"{path}: {_death(done)}", hint=HINT)
-    return load_tables(folder / "tables.npz")
 
 
 def _import_paths() -> list[str]:

@@ -96,16 +96,6 @@ def top_cells(tables: Tables) -> list[int]:
     return [int(cell) for cell in np.flatnonzero(is_top)]
 
 
-def polygon_boxes(tables: Tables) -> Floats:
-    """(n, 4) bounding boxes of the polygons [database units]."""
-    starts = tables.polygon_first[:-1]
-    if len(starts) == 0:
-        return np.zeros((0, 4))
-    low = np.minimum.reduceat(tables.polygon_points, starts, axis=0)
-    high = np.maximum.reduceat(tables.polygon_points, starts, axis=0)
-    return np.concatenate([low, high], axis=1).astype(np.float64)
-
-
 def turned_box(box: Floats, matrix: Floats) -> Floats:
     """(..., 4) bounding boxes of boxes (..., 4) under the matrices (..., 4)."""
     centre = (box[..., :2] + box[..., 2:]) / 2
@@ -138,15 +128,13 @@ def heights(tables: Tables, order: Ints) -> Ints:
     return height
 
 
-def cell_boxes(tables: Tables, order: Ints, boxes: Floats, chosen: Flags) -> tuple[Floats, Floats]:
+def cell_boxes(tables: Tables, order: Ints, chosen: Flags) -> tuple[Floats, Floats]:
     """Bounding boxes of every cell's hierarchy and of every reference.
 
     Parameters
     ----------
     order
         Cells, parents first.
-    boxes
-        (n, 4) boxes of the polygons.
     chosen
         (n,) polygons that count.
 
@@ -158,9 +146,14 @@ def cell_boxes(tables: Tables, order: Ints, boxes: Floats, chosen: Flags) -> tup
     """
     empty = np.array([np.inf, np.inf, -np.inf, -np.inf])
     cells = np.tile(empty, (len(tables.cell_names), 1))
-    owner = tables.polygon_cell[chosen]
-    np.minimum.at(cells[:, :2], owner, boxes[chosen, :2])
-    np.maximum.at(cells[:, 2:], owner, boxes[chosen, 2:])
+    rows = np.flatnonzero(chosen)
+    owner = tables.polygon_cell[rows]
+    # polygons of one cell are neighbours in the tables
+    starts = np.flatnonzero(np.diff(owner, prepend=-1))
+    for corner, best in ((0, np.minimum), (1, np.minimum), (2, np.maximum), (3, np.maximum)):
+        if len(starts):
+            side = tables.polygon_box[:, corner][rows]
+            cells[owner[starts], corner] = best.reduceat(side, starts)
     references = np.tile(empty, (len(tables.reference_parent), 1))
     spread = array_spread(tables)
     height = heights(tables, order)

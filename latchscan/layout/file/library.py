@@ -1,35 +1,36 @@
 """A layout library under one top cell, cheap to hand to worker processes.
 
-Pickling writes the tables once to a temporary file and passes its name on; a process that
-receives it loads the file once and keeps what it builds on it, however many tasks arrive.
-The file lives as long as the library that wrote it.
+Pickling passes on the name of the folder that holds the tables; a process that receives it
+maps the tables once and keeps what it builds on them, however many tasks arrive.  The folder
+lives as long as the library that was opened on it.
 """
 
 from __future__ import annotations
 
-import os
-import shutil
-import tempfile
-import weakref
 from collections.abc import Iterable
 from functools import lru_cache
 from pathlib import Path
 
 from latchscan.layout.file.hierarchy import parents_first
-from latchscan.layout.file.tables import Pair, Tables, load_tables, save_tables
+from latchscan.layout.file.tables import Pair, Tables, TablesFolder, load_tables
 from latchscan.layout.file.walk import Walker
 from latchscan.layout.model import Ints
 
 
 class Library:
-    """Tables, the order of their cells, the top, and window walkers by layer pairs."""
+    """Tables, the order of their cells, the top, and window walkers by layer pairs.
 
-    def __init__(self, tables: Tables, *, order: Ints, top: int) -> None:
+    `folder` holds the tables: the folder itself where this library keeps it, else its path.
+    """
+
+    def __init__(
+        self, tables: Tables, *, order: Ints, top: int, folder: TablesFolder | Path
+    ) -> None:
         self.tables = tables
         self.order = order
         self.top = top
+        self._folder = folder
         self._walkers: dict[tuple[Pair, ...], Walker] = {}
-        self._spilled: Path | None = None
 
     def walker(self, pairs: Iterable[Pair]) -> Walker:
         """The walker for these layer pairs, built on first use."""
@@ -39,23 +40,12 @@ class Library:
         return self._walkers[key]
 
     def __reduce__(self) -> tuple[object, ...]:
-        """Travel as the name of a file with the tables."""
-        if self._spilled is None:
-            folder = tempfile.mkdtemp(prefix="latchscan-")
-            # a forked worker inherits this object but must not remove the file
-            weakref.finalize(self, _remove, folder, os.getpid())
-            path = Path(folder) / "tables.npz"
-            save_tables(self.tables, path)
-            self._spilled = path
-        return (_revived, (str(self._spilled), self.top))
-
-
-def _remove(folder: str, owner: int) -> None:
-    if os.getpid() == owner:
-        shutil.rmtree(folder, ignore_errors=True)
+        """Travel as the name of the folder with the tables."""
+        path = self._folder.path if isinstance(self._folder, TablesFolder) else self._folder
+        return (_revived, (str(path), self.top))
 
 
 @lru_cache(maxsize=2)
 def _revived(path: str, top: int) -> Library:
     tables = load_tables(Path(path))
-    return Library(tables, order=parents_first(tables, path), top=top)
+    return Library(tables, order=parents_first(tables, path), top=top, folder=Path(path))

@@ -1,7 +1,8 @@
 """Which boxes of a cell meet a window: by comparison for few, by an R-tree for many.
 
-Polygons of a large flat cell share tree entries in blocks of neighbours, which keeps the
-tree small enough to be built in a moment even for a million polygons.
+Polygons of a large flat cell share tree entries in blocks of neighbours (the tables are in
+such an order), which keeps the tree small enough to be built in a moment even for a million
+polygons.
 """
 
 from __future__ import annotations
@@ -12,12 +13,11 @@ import numpy as np
 from numpy.typing import NDArray
 from rtree.index import Index
 
+from latchscan.layout.file.outlines import narrowed
 from latchscan.layout.model import Floats, Ints
 
 INDEX_FROM = 512
 """Cells with more references, or more polygons, than this get an R-tree."""
-BLOCK = 64
-"""Polygons of a large cell that share one entry of its R-tree."""
 CHUNK = 1 << 18
 """Most (window, row) pairs compared at once, to bound the memory."""
 
@@ -25,17 +25,20 @@ CHUNK = 1 << 18
 class BoxLookup:
     """Boxes grouped by the cell they belong to, looked up by windows in local coordinates."""
 
-    def __init__(self, rows: Ints, owner: Ints, boxes: Floats, *, spatial: bool) -> None:
+    def __init__(self, rows: Ints, owner: Ints, boxes: Floats | Ints, *, block: int) -> None:
         # rows of one cell are neighbours in the tables already
-        self._rows = rows
-        cells, starts = np.unique(owner[rows], return_index=True)
+        self._rows = narrowed(rows)
+        cells = owner[rows]
+        starts = np.flatnonzero(np.diff(cells, prepend=-1))
         ends = np.append(starts, len(rows))[1:]
         self._span = {
             cell: (low, high)
-            for cell, low, high in zip(cells.tolist(), starts.tolist(), ends.tolist(), strict=True)
+            for cell, low, high in zip(
+                cells[starts].tolist(), starts.tolist(), ends.tolist(), strict=True
+            )
         }
         self._boxes = boxes
-        self._block = BLOCK if spatial else 1
+        self._block = block
         self._trees: dict[int, tuple[Ints, Index]] = {}
 
     def meeting(self, cell: int, local: Floats) -> list[tuple[Ints, Ints]]:
@@ -84,33 +87,17 @@ class BoxLookup:
     def _plant(self, cell: int) -> tuple[Ints, Index]:
         low, high = self._span[cell]
         rows = self._rows[low:high]
-        boxes = self._boxes[rows]
-        if self._block > 1:
-            rows = rows[_strip_order(boxes, self._block)]
-            starts = np.arange(0, len(rows), self._block)
-            boxes = self._boxes[rows]
-            boxes = np.concatenate(
-                [
-                    np.minimum.reduceat(boxes[:, :2], starts, axis=0),
-                    np.maximum.reduceat(boxes[:, 2:], starts, axis=0),
-                ],
-                axis=1,
-            )
-        ids = np.arange(len(boxes), dtype=np.int64)
-        return rows, Index((ids, boxes[:, :2].copy(), boxes[:, 2:].copy()))
+        starts = np.arange(0, len(rows), self._block)
+        # a side at a time: copies of all boxes of a large cell would be large themselves
+        sides = [
+            best.reduceat(self._boxes[:, side][rows], starts).astype(np.float64)
+            for side, best in enumerate((np.minimum, np.minimum, np.maximum, np.maximum))
+        ]
+        ids = np.arange(len(starts), dtype=np.int64)
+        return rows, Index((ids, np.column_stack(sides[:2]), np.column_stack(sides[2:])))
 
 
-def _strip_order(boxes: Floats, block: int) -> Ints:
-    """Order by strips so that runs of `block` boxes stay close together."""
-    centre = (boxes[:, :2] + boxes[:, 2:]) / 2
-    by_x = np.argsort(centre[:, 0], kind="stable")
-    strips = max(1, int(np.sqrt(len(boxes) / block)))
-    strip = np.empty(len(boxes), dtype=np.int64)
-    strip[by_x] = np.arange(len(boxes)) * strips // len(boxes)
-    return np.lexsort((centre[:, 1], strip))
-
-
-def boxes_meet(left: Floats, right: Floats) -> NDArray[np.bool_]:
+def boxes_meet(left: Floats | Ints, right: Floats | Ints) -> NDArray[np.bool_]:
     """Whether boxes (..., 4) meet; touching counts."""
     return (
         (left[..., 0] <= right[..., 2])

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from latchscan.errors import LayoutError
 from latchscan.layout.file.hierarchy import child_lists, turned_box
-from latchscan.layout.file.tables import Tables
+from latchscan.layout.file.tables import Pair, Tables
 from latchscan.layout.model import Floats, Ints
 from latchscan.layout.runs import within_runs
 
@@ -157,6 +157,8 @@ def all_placements(
             found[cell] = copies
         rows = np.arange(first[cell], first[cell + 1])
         rows = rows[on_the_way[tables.reference_child[rows]]]
+        if len(rows) == 0:
+            continue
         copy = np.repeat(np.arange(len(copies)), len(rows))
         rows = np.tile(rows, len(copies))
         low = np.zeros((len(rows), 2), dtype=np.int64)
@@ -164,6 +166,38 @@ def all_placements(
         for child, part in split_by_child(tables, placed, rows):
             waiting.setdefault(child, []).append(part)
     return found
+
+
+def placed_texts(
+    tables: Tables, order: Ints, top: int, pairs: Collection[Pair]
+) -> tuple[Floats, Floats, Ints]:
+    """Every copy of the texts on some pairs under `top`: x, y [database units] and its row.
+
+    Sorted by (y, x, text, pair); positions are whole numbers.
+    """
+    wanted = np.array([pair in pairs for pair in tables.pairs], dtype=np.bool_)
+    rows = np.flatnonzero(wanted[tables.label_pair])
+    rows = rows[np.argsort(tables.label_cell[rows], kind="stable")]
+    cell = tables.label_cell[rows]
+    placements = all_placements(tables, top=top, order=order, cells=set(cell.tolist()))
+    parts = [placements[number] for number in sorted(placements)]
+    copies = joined([*parts, identity(0)])
+    # copies of one cell are neighbours, and so are its texts: all copies of each text
+    count = np.zeros(len(order), dtype=np.int64)
+    count[sorted(placements)] = [len(part) for part in parts]
+    before = np.cumsum(count) - count
+    source = np.repeat(rows, count[cell])
+    copy = np.repeat(before[cell], count[cell]) + within_runs(count[cell])
+    places = turned(copies.matrix[copy], tables.label_points[source].astype(np.float64))
+    x, y = np.floor(places + copies.shift[copy] + 0.5).T
+    texts = tables.label_texts
+    rank_of = {
+        text: rank for rank, text in enumerate(sorted({texts[row] for row in rows.tolist()}))
+    }
+    rank = np.zeros(len(texts), dtype=np.int64)
+    rank[rows] = [rank_of[texts[row]] for row in rows.tolist()]
+    by_place = np.lexsort((tables.label_pair[source], rank[source], x, y))
+    return x[by_place], y[by_place], source[by_place]
 
 
 def _ancestors(tables: Tables, order: Ints, cells: Collection[int]) -> NDArray[np.bool_]:

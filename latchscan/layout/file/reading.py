@@ -21,7 +21,8 @@ from typing import Any
 import gdstk
 import numpy as np
 
-from latchscan.layout.file.outlines import OutlineColumns, check_range, whole
+from latchscan.layout.file.outlines import BATCH, OutlineColumns, check_range, whole
+from latchscan.layout.file.passes import passes_over
 from latchscan.layout.file.tables import Pair, Tables, save_tables
 from latchscan.layout.model import Floats
 
@@ -60,6 +61,7 @@ class _Columns:
 
     outlines: OutlineColumns
     units: float
+    database_unit_um: float
     references: list[tuple[int, int]] = field(default_factory=list)
     placements: list[tuple[float, ...]] = field(default_factory=list)
     counts: list[tuple[int, int]] = field(default_factory=list)
@@ -73,6 +75,14 @@ class _Columns:
     expanded: int = 0
     absolute_width_in: str = ""
     is_magnified: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Take:
+    """Numbers of the layer/datatype pairs of shapes and texts that are taken."""
+
+    shapes: dict[Pair, int]
+    texts: dict[Pair, int]
 
 
 def main(arguments: list[str]) -> int:
@@ -130,24 +140,46 @@ def read_tables(path: str, *, kind: str, shape_pairs: list[Pair], text_pairs: li
     if kind == "oasis":
         _check_oasis_end(Path(path))
     info = gdstk.gds_info(path) if kind == "gdsii" else {}
-    library = (
-        gdstk.read_gds(path, filter=set(shape_pairs)) if kind == "gdsii" else gdstk.read_oas(path)
+    passes = passes_over(Path(path), info, set(shape_pairs)) if kind == "gdsii" else [None]
+    pairs = tuple(sorted({*shape_pairs, *text_pairs}))
+    take = _Take(
+        shapes={pair: pairs.index(pair) for pair in shape_pairs},
+        texts={pair: pairs.index(pair) for pair in text_pairs},
     )
-    if not (library.precision > 0 and library.unit > 0):
-        raise UnreadableError("the database unit must be above 0")
-    units = library.unit / library.precision
-    columns = _Columns(outlines=OutlineColumns(units), units=units)
+    # cells, references and texts come with every pass and are taken from the first
+    columns = _read_pass(path, passes[0], None, take)
+    for one in passes[1:]:
+        _read_pass(path, one, columns, take)
     # shapes that the filter left out are still worth a note
     columns.file_pairs.update(info.get("layers_and_datatypes", ()))
     columns.file_text_pairs.update(info.get("layers_and_texttypes", ()))
-    pairs = tuple(sorted({*shape_pairs, *text_pairs}))
-    _walk_cells(library, columns, pairs, set(shape_pairs), set(text_pairs))
     if columns.absolute_width_in and columns.is_magnified:
         raise UnreadableError(
             f"cell {columns.absolute_width_in!r} has a path of absolute width and the file"
             " magnifies cells; expected plain widths or no magnification"
         )
-    return _finish(columns, pairs, library.precision * 1e6)
+    return _finish(columns, pairs)
+
+
+def _read_pass(
+    path: str, wanted: set[Pair] | None, columns: _Columns | None, take: _Take
+) -> _Columns:
+    """Read the file once, with some of its GDSII shapes or as a whole (None)."""
+    library = gdstk.read_oas(path) if wanted is None else gdstk.read_gds(path, filter=wanted)
+    if columns is not None:
+        for index, cell in enumerate(library.cells):
+            _take_shapes(cell, index, columns, take.shapes, plain=True)
+        columns.outlines.flush()
+        return columns
+    if not (library.precision > 0 and library.unit > 0):
+        raise UnreadableError("the database unit must be above 0")
+    units = library.unit / library.precision
+    columns = _Columns(
+        outlines=OutlineColumns(units), units=units, database_unit_um=library.precision * 1e6
+    )
+    _walk_cells(library, columns, take, plain=wanted is not None)
+    columns.outlines.flush()
+    return columns
 
 
 def _check_oasis_end(path: Path) -> None:
@@ -164,57 +196,60 @@ def _check_oasis_end(path: Path) -> None:
         raise UnreadableError("its checksum does not match its content")
 
 
-def _walk_cells(
-    library: Any,
-    columns: _Columns,
-    pairs: tuple[Pair, ...],
-    shape_pairs: set[Pair],
-    text_pairs: set[Pair],
-) -> None:
-    number = {pair: index for index, pair in enumerate(pairs)}
+def _walk_cells(library: Any, columns: _Columns, take: _Take, *, plain: bool) -> None:
     columns.cell_names.extend(cell.name for cell in library.cells)
     cell_index = {name: index for index, name in enumerate(columns.cell_names)}
     if len(cell_index) != len(columns.cell_names):
         raise UnreadableError("two cells have the same name")
     for index, cell in enumerate(library.cells):
-        shapes = {pair: number[pair] for pair in shape_pairs}
-        _take_polygons(cell, index, columns, shapes)
+        _take_shapes(cell, index, columns, take.shapes, plain=plain)
         _take_references(cell, index, columns, cell_index)
-        _take_labels(cell, index, columns, {pair: number[pair] for pair in text_pairs})
+        _take_labels(cell, index, columns, take.texts)
 
 
-def _take_polygons(cell: Any, index: int, columns: _Columns, number: dict[Pair, int]) -> None:
-    for polygon, repetition, keeps_width in _outlines(cell):
-        pair = (polygon.layer, polygon.datatype)
-        if pair not in number:
-            columns.file_pairs.add(pair)
-            continue
-        if keeps_width:
-            columns.absolute_width_in = cell.name
-        if repetition.size == 0 and repetition.columns is None:
-            columns.outlines.add(polygon.points, index, number[pair])
-        elif 0 < repetition.size <= SMALL_REPETITION:
-            for offset in repetition.get_offsets():
-                columns.outlines.add(polygon.points + offset, index, number[pair])
-        else:
-            # a cell of its own keeps a large array of shapes as cheap as an array of cells
-            own = len(columns.cell_names)
-            columns.cell_names.append(f"{cell.name} (repeated shape {own})")
-            columns.outlines.add(polygon.points, own, number[pair])
-            _place(columns, index, own, (1.0, 0.0, 0.0, 1.0), (0.0, 0.0), repetition)
-
-
-def _outlines(cell: Any) -> Iterator[tuple[Any, Any, bool]]:
-    """Polygons, boxes and paths of a cell as polygons.
-
-    Each comes with its repetition and whether its width shall stay when it is magnified.
-    """
-    for polygon in cell.polygons:
-        yield polygon, polygon.repetition, False
+def _take_shapes(
+    cell: Any, index: int, columns: _Columns, number: dict[Pair, int], *, plain: bool
+) -> None:
+    """Polygons, boxes and paths of a cell; `plain` where only wanted shapes were read (GDSII)."""
+    polygons = cell.polygons
+    if not plain:
+        for polygon in polygons:
+            _take_polygon(cell, index, columns, number, polygon, polygon.repetition)
+    else:
+        # GDSII repeats no shapes
+        for start in range(0, len(polygons), BATCH):
+            part = polygons[start : start + BATCH]
+            pairs = [number[polygon.layer, polygon.datatype] for polygon in part]
+            columns.outlines.extend([polygon.points for polygon in part], index, pairs)
     for path in cell.paths:
-        repetition = path.repetition
         for polygon in path.to_polygons():
-            yield polygon, repetition, not path.scale_width
+            if not path.scale_width and (polygon.layer, polygon.datatype) in number:
+                columns.absolute_width_in = cell.name
+            _take_polygon(cell, index, columns, number, polygon, path.repetition)
+
+
+def _take_polygon(
+    cell: Any,
+    index: int,
+    columns: _Columns,
+    number: dict[Pair, int],
+    polygon: Any,
+    repetition: Any,
+) -> None:
+    pair = (polygon.layer, polygon.datatype)
+    if pair not in number:
+        columns.file_pairs.add(pair)
+    elif repetition.size == 0 and repetition.columns is None:
+        columns.outlines.add(polygon.points, index, number[pair])
+    elif 0 < repetition.size <= SMALL_REPETITION:
+        for offset in repetition.get_offsets():
+            columns.outlines.add(polygon.points + offset, index, number[pair])
+    else:
+        # a cell of its own keeps a large array of shapes as cheap as an array of cells
+        own = len(columns.cell_names)
+        columns.cell_names.append(f"{cell.name} (repeated shape {own})")
+        columns.outlines.add(polygon.points, own, number[pair])
+        _place(columns, index, own, (1.0, 0.0, 0.0, 1.0), (0.0, 0.0), repetition)
 
 
 def _take_references(cell: Any, index: int, columns: _Columns, cell_index: dict[str, int]) -> None:
@@ -338,9 +373,9 @@ def _text(label: Any) -> str:
         return "\ufffd"
 
 
-def _finish(columns: _Columns, pairs: tuple[Pair, ...], database_unit_um: float) -> Tables:
+def _finish(columns: _Columns, pairs: tuple[Pair, ...]) -> Tables:
     """Turn the columns into sorted tables of whole database units."""
-    points, first, cell, pair = columns.outlines.finish()
+    outlines = columns.outlines.finish()
     references = np.array(columns.references, dtype=np.int64).reshape(-1, 2)
     placements = np.array(columns.placements, dtype=np.float64).reshape(-1, 10)
     placements[:, 4:] = _snapped(placements[:, 4:])
@@ -349,19 +384,22 @@ def _finish(columns: _Columns, pairs: tuple[Pair, ...], database_unit_um: float)
     labels = np.array(columns.labels, dtype=np.int64).reshape(-1, 2)
     label_points = np.array(columns.label_points, dtype=np.float64).reshape(-1, 2)
     return Tables(
-        database_unit_um=database_unit_um,
+        database_unit_um=columns.database_unit_um,
         cell_names=tuple(columns.cell_names),
         pairs=pairs,
         file_pairs=tuple(
-            sorted(columns.file_pairs.union(pairs[row] for row in set(pair.tolist())))
+            sorted(
+                columns.file_pairs.union(pairs[row] for row in np.unique(outlines.pair).tolist())
+            )
         ),
         file_text_pairs=tuple(sorted(columns.file_text_pairs)),
         missing=tuple(columns.missing),
         dropped_count=columns.outlines.dropped_count,
-        polygon_points=points,
-        polygon_first=first,
-        polygon_cell=cell,
-        polygon_pair=pair,
+        polygon_points=outlines.points,
+        polygon_first=outlines.first,
+        polygon_box=outlines.box,
+        polygon_cell=outlines.cell,
+        polygon_pair=outlines.pair,
         reference_parent=references[by_parent, 0],
         reference_child=references[by_parent, 1],
         reference_matrix=placements[by_parent, :4],

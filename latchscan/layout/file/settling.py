@@ -13,7 +13,6 @@ from latchscan.errors import LayoutError
 from latchscan.layout.file.hierarchy import (
     cell_boxes,
     exact_box,
-    polygon_boxes,
     reachable,
     top_cells,
 )
@@ -50,7 +49,7 @@ def choose_top(
     else:
         tops = top_cells(tables)
     everything = np.ones(len(tables.polygon_cell), dtype=np.bool_)
-    boxes, _ = cell_boxes(tables, order, polygon_boxes(tables), everything)
+    boxes, _ = cell_boxes(tables, order, everything)
     filled = [cell for cell in tops if boxes[cell, 0] <= boxes[cell, 2]]
     if not filled:
         raise LayoutError(
@@ -151,7 +150,7 @@ def bounding_box(path: Path, tables: Tables, order: Ints, top: int) -> tuple[int
     """
     used = reachable(tables, top)
     chosen = used[tables.polygon_cell]
-    boxes, references = cell_boxes(tables, order, polygon_boxes(tables), chosen)
+    boxes, references = cell_boxes(tables, order, chosen)
     box = boxes[top]
     inside = references[used[tables.reference_parent] & (references[:, 0] <= references[:, 2])]
     if not max(np.abs(box).max(), np.abs(inside).max(initial=0)) <= LARGEST_COORDINATE:

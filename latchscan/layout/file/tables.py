@@ -1,18 +1,24 @@
 """The plain tables a layout file becomes: what the reading child hands to its parent.
 
-Only numpy arrays and strings, so that they travel through a file without any code in it and
-are shared with forked workers at no cost.  Coordinates are whole database units; transforms
-and array vectors are float64, exact for every multiple of a quarter turn.
+Only numpy arrays and strings, so that they travel through files without any code in them.
+Every process that needs them maps the same files into its memory, which therefore holds them
+once.  Coordinates are whole database units, in 32 bits where they fit; transforms and array
+vectors are float64, exact for every multiple of a quarter turn.
 """
 
 from __future__ import annotations
 
 import json
+import os
+import shutil
+import sys
+import tempfile
+import weakref
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Literal
 
 import numpy as np
-from numpy.typing import NDArray
 
 from latchscan.layout.model import Floats, Ints, frozen
 
@@ -22,6 +28,7 @@ Pair = tuple[int, int]
 _ARRAYS = (
     "polygon_points",
     "polygon_first",
+    "polygon_box",
     "polygon_cell",
     "polygon_pair",
     "reference_parent",
@@ -58,8 +65,11 @@ class Tables:
         (N, 2) vertices (x, y) [database units], counter-clockwise, closing vertex left out.
     polygon_first
         (n + 1,) offsets of the polygons in `polygon_points`.
+    polygon_box
+        (n, 4) bounding boxes x0, y0, x1, y1 of the polygons [database units].
     polygon_cell, polygon_pair
-        (n,) cell and pair of each polygon; rows are sorted by (cell, pair).
+        (n,) cell and pair of each polygon; rows are sorted by (cell, pair), and where these
+        are many, neighbours in the rows are neighbours in the plane.
     reference_parent, reference_child
         (r,) cells; rows are sorted by parent.
     reference_matrix
@@ -83,6 +93,7 @@ class Tables:
     dropped_count: int
     polygon_points: Ints
     polygon_first: Ints
+    polygon_box: Ints
     polygon_cell: Ints
     polygon_pair: Ints
     reference_parent: Ints
@@ -97,8 +108,26 @@ class Tables:
     label_texts: tuple[str, ...]
 
 
-def save_tables(tables: Tables, path: Path) -> None:
-    """Write the tables to an uncompressed npz file."""
+class TablesFolder:
+    """A new folder for tables, removed with the last reference to it."""
+
+    def __init__(self) -> None:
+        self.path = Path(tempfile.mkdtemp(prefix="latchscan-"))
+        # a forked worker inherits this object but must not remove the files
+        self._finalizer = weakref.finalize(self, _remove, str(self.path), os.getpid())
+
+    def remove(self) -> None:
+        """Remove the folder at once."""
+        self._finalizer()
+
+
+def _remove(folder: str, owner: int) -> None:
+    if os.getpid() == owner:
+        shutil.rmtree(folder, ignore_errors=True)
+
+
+def save_tables(tables: Tables, folder: Path) -> None:
+    """Write the tables to a folder: a file for each array, one for all words."""
     words = {
         "database_unit_um": tables.database_unit_um,
         "cell_names": tables.cell_names,
@@ -110,17 +139,22 @@ def save_tables(tables: Tables, path: Path) -> None:
         "label_texts": tables.label_texts,
     }
     # ASCII escapes keep lone surrogates of damaged names alive
-    text = np.frombuffer(json.dumps(words).encode("ascii"), dtype=np.uint8)
-    arrays: dict[str, NDArray[np.generic]] = {name: getattr(tables, name) for name in _ARRAYS}
-    with path.open("wb") as stream:
-        np.savez(stream, allow_pickle=False, words=text, **arrays)
+    (folder / "words.json").write_text(json.dumps(words), encoding="ascii")
+    for name in _ARRAYS:
+        np.save(folder / f"{name}.npy", getattr(tables, name), allow_pickle=False)
 
 
-def load_tables(path: Path) -> Tables:
-    """Read the tables back, every array read-only."""
-    with np.load(path, allow_pickle=False) as data:
-        words = json.loads(data["words"].tobytes())
-        arrays = {name: frozen(data[name]) for name in _ARRAYS}
+def load_tables(folder: Path) -> Tables:
+    """The tables of a folder, every array read-only and read where it is looked at."""
+    words = json.loads((folder / "words.json").read_text(encoding="ascii"))
+    # there, a file that is in use could not be removed
+    mode: Literal["r"] | None = None if sys.platform == "win32" else "r"
+    arrays = {
+        name: frozen(
+            np.asarray(np.load(folder / f"{name}.npy", mmap_mode=mode, allow_pickle=False))
+        )
+        for name in _ARRAYS
+    }
     return Tables(
         database_unit_um=words["database_unit_um"],
         cell_names=tuple(words["cell_names"]),

@@ -14,9 +14,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from latchscan.layout.file.hierarchy import cell_boxes, polygon_boxes, turned_box
+from latchscan.layout.file.hierarchy import cell_boxes, turned_box
 from latchscan.layout.file.lookup import BoxLookup, boxes_meet
-from latchscan.layout.file.outlines import vertex_rows
+from latchscan.layout.file.outlines import BLOCK, vertex_rows
 from latchscan.layout.file.placements import (
     Placements,
     array_inverses,
@@ -66,11 +66,12 @@ class Walker:
         self._rank[order] = np.arange(len(order))
         wanted = np.array([pair in set(pairs) for pair in tables.pairs], dtype=np.bool_)
         chosen = wanted[tables.polygon_pair]
-        boxes = polygon_boxes(tables)
-        cells, references = cell_boxes(tables, order, boxes, chosen)
-        self._polygons = BoxLookup(np.flatnonzero(chosen), tables.polygon_cell, boxes, spatial=True)
+        cells, references = cell_boxes(tables, order, chosen)
+        self._polygons = BoxLookup(
+            np.flatnonzero(chosen), tables.polygon_cell, tables.polygon_box, block=BLOCK
+        )
         live = np.flatnonzero(references[:, 0] <= references[:, 2])
-        self._references = BoxLookup(live, tables.reference_parent, references, spatial=False)
+        self._references = BoxLookup(live, tables.reference_parent, references, block=1)
         self._base_box = np.zeros_like(references)
         self._base_box[live] = turned_box(
             cells[tables.reference_child[live]], tables.reference_matrix[live]
@@ -182,7 +183,7 @@ def _placed(points: Ints, matrix: Floats, shift: Floats, owner: Ints) -> Ints:
     """Vertices in the top's coordinates, rounded to the database grid (halves upwards)."""
     plain = (matrix == (1.0, 0.0, 0.0, 1.0)).all()
     if plain and not shift.any():
-        return points
+        return points.astype(np.int64)
     place = shift[owner]
     if not plain:
         place = place + turned(matrix[owner], points.astype(np.float64))

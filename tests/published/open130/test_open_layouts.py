@@ -145,3 +145,15 @@ def test_the_thyristor_is_the_pair_of_isolated_wells(open_layouts: Path) -> None
     base = evidence.layout.bodies[evidence.pairs.base[pair]]
     assert base.kind == "isolated_pwell"
     assert base.id != evidence.layout.bodies[body].id
+
+
+def test_a_layout_whose_only_injector_is_its_well(open_layouts: Path) -> None:
+    """The varactor has an n-well on its pin W (its label) and no emitter at all."""
+    result = scanned(open_layouts / "SVaricap.gds")
+    evidence = result.evidence
+    assert len(evidence.layout.emitters.ids) == 0
+    injectors, pins = evidence.connections.injectors, evidence.connections.pins
+    assert [str(pins.names[pin]) for pin in injectors.pin] == ["W"]
+    assert injectors.emitter.tolist() == [-1]
+    (missing,) = [finding for finding in result.findings if finding.rule == "ring-missing"]
+    assert missing.subject == "nwell-1"

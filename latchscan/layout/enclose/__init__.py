@@ -1,0 +1,1 @@
+"""Behind `latchscan.layout.rings`: how strips are found to enclose, and what they are worth."""

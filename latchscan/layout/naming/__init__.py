@@ -1,0 +1,1 @@
+"""Behind `pins`, `ties` and `injectors`: names in conflict, footing on pieces, paths, openings."""
