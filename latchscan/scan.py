@@ -21,7 +21,7 @@ from latchscan.layout.left_out import pairs_outside
 from latchscan.layout.model import Box, Floats, Layout
 from latchscan.layout.nets import can_trace, trace_nets
 from latchscan.layout.pairs import find_pairs
-from latchscan.layout.pins import name_nets
+from latchscan.layout.pins import name_nets, require_names
 from latchscan.layout.regions import derive_regions
 from latchscan.layout.rings import find_rings
 from latchscan.layout.source import LayoutSource
@@ -116,6 +116,7 @@ def scan(
     technology = loaded.technology
     origin = _origin(source, loaded, options)
     temperature_k = kelvin(origin.temperature_c)
+    require_names(source, technology, options.block)
     regions = derive_regions(source, technology, options.window_um, workers)
     layout = assemble_layout(regions, technology)
     layout, connections, notes = _connect(

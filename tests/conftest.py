@@ -5,6 +5,12 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
+from hypothesis import settings
+
+# the same examples every time, and no verdict by the clock of a busy machine; look for new
+# examples with `pytest --hypothesis-profile=default`
+settings.register_profile("steady", derandomize=True, deadline=None)
+settings.load_profile("steady")
 
 ROOT = Path(__file__).parent.parent
 OPEN_LAYOUTS = Path(__file__).parent / ".data" / "open130"

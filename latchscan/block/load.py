@@ -14,6 +14,8 @@ from latchscan.technology import document
 from latchscan.technology.document import Place, one_line, read_document, shown_text
 
 SUFFIX = ".yaml"
+TELLING_KEYS = frozenset({"supplies", "grounds", "pins", "joined", "leave_out"})
+"""Keys of which any shows that a block file was meant."""
 _ZIPPED = ".gz"
 
 
@@ -121,8 +123,13 @@ def load_block_beside(layout_path: Path | str) -> LoadedBlock | None:
     Raises
     ------
     BlockError
-        If the file is wrong, or is something else than a block file: passing over it in
-        silence would lose what it says.
+        If the file is wrong, or does not say that it is a block file but has keys of one:
+        passing over it in silence would lose what it says.
+
+    Notes
+    -----
+    A file without any key of a block file, such as a technology that bears the layout's name,
+    is something else and is passed over.
     """
     found = find_block(layout_path)
     if found is None:
@@ -130,6 +137,8 @@ def load_block_beside(layout_path: Path | str) -> LoadedBlock | None:
     path, content = read_block_file(found)
     data = read_document(content, BLOCK_FILE).data
     if isinstance(data, dict) and data.get("format") != FORMAT:
+        if not TELLING_KEYS.intersection(data):
+            return None
         kind = data.get("format")
         got = shown_text(kind) if isinstance(kind, str) else "none"
         raise BlockError(

@@ -242,7 +242,7 @@ def _gathered(ground: Ground, texts: Texts) -> tuple[_Found, Ints]:
     piece = np.concatenate([none, *(ground.piece_component[n] for n in diffusions)])
     polygons = [ground.derived[stack.sorts[n].name] for n in diffusions]
     shapes = np.concatenate([np.zeros(0, dtype=np.object_), *polygons])
-    pad = _pads(ground)
+    pad = _pads(ground, label)
     marked = marked_resistors(ground)
     taps = _taps(ground, shapes)
     seeds = np.concatenate([label[label >= 0], pad[pad >= 0], piece[taps]])
@@ -251,8 +251,12 @@ def _gathered(ground: Ground, texts: Texts) -> tuple[_Found, Ints]:
     return found, label_sort
 
 
-def _pads(ground: Ground) -> Ints:
-    """(q,) node's component beneath most of each pad, -1 where there is none."""
+def _pads(ground: Ground, label: Ints) -> Ints:
+    """(q,) node's component beneath most of each pad, -1 where there is none.
+
+    Of two that lie beneath as much, the one with a label is meant, then the larger one: where
+    they lie decides last, for that changes as the block is turned.
+    """
     pads = ground.derived.get(PADS)
     if pads is None:
         return np.zeros(0, dtype=np.int64)
@@ -264,7 +268,7 @@ def _pads(ground: Ground) -> Ints:
     for number, pad in enumerate(pads):
         own = order[edges[number] : edges[number + 1]]
         node = ground.wiring.home[hits.component[own]]
-        best = -1.0
+        best = (-1.0, False, 0.0)
         for home in np.unique(node).tolist():
             mine = own[node == home]
             bent = hits.polygon[mine] != np.array(None)
@@ -273,8 +277,14 @@ def _pads(ground: Ground) -> Ints:
                 *(in_um(shape, ground.unit_um) for shape in hits.polygon[mine[bent]]),
             ]
             area = float(shapely.area(shapely.intersection(pad, shapely.union_all(below))))
-            if area > best + LEAST_OVERLAP_UM2:
-                best, found[number] = area, home
+            x0, y0, x1, y1 = ground.whole.box[home].tolist()
+            rank = (
+                LEAST_OVERLAP_UM2 * round(area / LEAST_OVERLAP_UM2),
+                bool(np.any(label == home)),
+                float((x1 - x0) * (y1 - y0)),
+            )
+            if rank > best:
+                best, found[number] = rank, home
     return found
 
 

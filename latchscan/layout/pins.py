@@ -30,8 +30,10 @@ from latchscan.layout.naming.drafts import (
     PinDraft,
     drafts_of_block,
     drafts_of_names,
+    require_texts,
 )
 from latchscan.layout.runs import offsets
+from latchscan.layout.source import LayoutSource
 from latchscan.layout.unconnected import no_pins
 from latchscan.technology.model import Technology
 
@@ -41,6 +43,20 @@ __all__ = [
     "name_conflicts",
     "name_nets",
 ]
+
+
+def require_names(source: LayoutSource, technology: Technology, block: LoadedBlock | None) -> None:
+    """Refuse a block file whose names the layout lacks, before anything long is begun.
+
+    Raises
+    ------
+    BlockError
+        A name is no text of the layout.
+    """
+    if block is not None and technology.conductors is not None:
+        split = (pair.split("/") for pair in technology.text_layers())
+        labels = source.labels([(int(layer), int(texttype)) for layer, texttype in split])
+        require_texts({label.text for label in labels}, block)
 
 
 def name_nets(

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Literal
+from typing import Literal, Protocol
 
 import numpy as np
 
@@ -74,169 +74,70 @@ class Rule:
     describe: Callable[[Evidence, Breaks, int, int], str]
 
 
+class _Page(Protocol):
+    """What the file of a rule holds."""
+
+    __doc__: str | None
+    NAME: str
+    UNIT: str
+
+    def describe(self, evidence: Evidence, breaks: Breaks, row: int, count: int, /) -> str: ...
+
+
+def _listed(page: _Page, check: Callable[[Evidence, Rules], Breaks]) -> Rule:
+    """A rule by its file; the block of its limits has the rule's name."""
+    block = page.NAME.replace("-", "_")
+
+    def severity(rules: Rules) -> Severity:
+        found: Severity = getattr(rules, block).severity
+        return found
+
+    return Rule(
+        name=page.NAME,
+        unit=page.UNIT,
+        page=page.__doc__ or "",
+        severity=severity,
+        check=check,
+        describe=page.describe,
+    )
+
+
 _TABLE: tuple[Rule, ...] = (
-    Rule(
-        name=untied_body.NAME,
-        unit=untied_body.UNIT,
-        page=untied_body.__doc__ or "",
-        severity=lambda rules: rules.untied_body.severity,
-        check=lambda evidence, _: untied_body.check(evidence),
-        describe=untied_body.describe,
+    _listed(untied_body, lambda evidence, _: untied_body.check(evidence)),
+    _listed(tie_net, lambda evidence, _: tie_net.check(evidence)),
+    _listed(tie_conflict, lambda evidence, _: tie_conflict.check(evidence)),
+    _listed(
+        tie_resistance, lambda evidence, rules: tie_resistance.check(evidence, rules.tie_resistance)
     ),
-    Rule(
-        name=tie_net.NAME,
-        unit=tie_net.UNIT,
-        page=tie_net.__doc__ or "",
-        severity=lambda rules: rules.tie_net.severity,
-        check=lambda evidence, _: tie_net.check(evidence),
-        describe=tie_net.describe,
-    ),
-    Rule(
-        name=tie_conflict.NAME,
-        unit=tie_conflict.UNIT,
-        page=tie_conflict.__doc__ or "",
-        severity=lambda rules: rules.tie_conflict.severity,
-        check=lambda evidence, _: tie_conflict.check(evidence),
-        describe=tie_conflict.describe,
-    ),
-    Rule(
-        name=tie_resistance.NAME,
-        unit=tie_resistance.UNIT,
-        page=tie_resistance.__doc__ or "",
-        severity=lambda rules: rules.tie_resistance.severity,
-        check=lambda evidence, rules: tie_resistance.check(evidence, rules.tie_resistance),
-        describe=tie_resistance.describe,
-    ),
-    Rule(
-        name=forward_bias.NAME,
-        unit=forward_bias.UNIT,
-        page=forward_bias.__doc__ or "",
-        severity=lambda rules: rules.forward_bias.severity,
-        check=lambda evidence, rules: forward_bias.check(evidence, rules.forward_bias),
-        describe=forward_bias.describe,
-    ),
-    Rule(
-        name=isolation_gap.NAME,
-        unit=isolation_gap.UNIT,
-        page=isolation_gap.__doc__ or "",
-        severity=lambda rules: rules.isolation_gap.severity,
-        check=lambda evidence, _: isolation_gap.check(evidence),
-        describe=isolation_gap.describe,
-    ),
-    Rule(
-        name=loop_gain.NAME,
-        unit=loop_gain.UNIT,
-        page=loop_gain.__doc__ or "",
-        severity=lambda rules: rules.loop_gain.severity,
-        check=lambda evidence, rules: loop_gain.check(
+    _listed(forward_bias, lambda evidence, rules: forward_bias.check(evidence, rules.forward_bias)),
+    _listed(isolation_gap, lambda evidence, _: isolation_gap.check(evidence)),
+    _listed(
+        loop_gain,
+        lambda evidence, rules: loop_gain.check(
             evidence, rules.loop_gain, untied_reported=rules.untied_body.severity != "off"
         ),
-        describe=loop_gain.describe,
     ),
-    Rule(
-        name=tap_distance.NAME,
-        unit=tap_distance.UNIT,
-        page=tap_distance.__doc__ or "",
-        severity=lambda rules: rules.tap_distance.severity,
-        check=lambda evidence, rules: tap_distance.check(evidence, rules.tap_distance),
-        describe=tap_distance.describe,
+    _listed(tap_distance, lambda evidence, rules: tap_distance.check(evidence, rules.tap_distance)),
+    _listed(
+        injector_spacing,
+        lambda evidence, rules: injector_spacing.check(evidence, rules.injector_spacing),
     ),
-    Rule(
-        name=injector_spacing.NAME,
-        unit=injector_spacing.UNIT,
-        page=injector_spacing.__doc__ or "",
-        severity=lambda rules: rules.injector_spacing.severity,
-        check=lambda evidence, rules: injector_spacing.check(evidence, rules.injector_spacing),
-        describe=injector_spacing.describe,
+    _listed(ring_gap, lambda evidence, rules: ring_gap.check(evidence, rules.ring_gap)),
+    _listed(ring_net, lambda evidence, _: ring_net.check(evidence)),
+    _listed(ring_missing, lambda evidence, rules: ring_missing.check(evidence, rules.ring_missing)),
+    _listed(tap_reach, lambda evidence, rules: tap_reach.check(evidence, rules.tap_reach)),
+    _listed(
+        well_resistance,
+        lambda evidence, rules: well_resistance.check(evidence, rules.well_resistance),
     ),
-    Rule(
-        name=ring_gap.NAME,
-        unit=ring_gap.UNIT,
-        page=ring_gap.__doc__ or "",
-        severity=lambda rules: rules.ring_gap.severity,
-        check=lambda evidence, rules: ring_gap.check(evidence, rules.ring_gap),
-        describe=ring_gap.describe,
+    _listed(ring_width, lambda evidence, rules: ring_width.check(evidence, rules.ring_width)),
+    _listed(
+        ring_contacts, lambda evidence, rules: ring_contacts.check(evidence, rules.ring_contacts)
     ),
-    Rule(
-        name=ring_net.NAME,
-        unit=ring_net.UNIT,
-        page=ring_net.__doc__ or "",
-        severity=lambda rules: rules.ring_net.severity,
-        check=lambda evidence, _: ring_net.check(evidence),
-        describe=ring_net.describe,
-    ),
-    Rule(
-        name=ring_missing.NAME,
-        unit=ring_missing.UNIT,
-        page=ring_missing.__doc__ or "",
-        severity=lambda rules: rules.ring_missing.severity,
-        check=lambda evidence, rules: ring_missing.check(evidence, rules.ring_missing),
-        describe=ring_missing.describe,
-    ),
-    Rule(
-        name=tap_reach.NAME,
-        unit=tap_reach.UNIT,
-        page=tap_reach.__doc__ or "",
-        severity=lambda rules: rules.tap_reach.severity,
-        check=lambda evidence, rules: tap_reach.check(evidence, rules.tap_reach),
-        describe=tap_reach.describe,
-    ),
-    Rule(
-        name=well_resistance.NAME,
-        unit=well_resistance.UNIT,
-        page=well_resistance.__doc__ or "",
-        severity=lambda rules: rules.well_resistance.severity,
-        check=lambda evidence, rules: well_resistance.check(evidence, rules.well_resistance),
-        describe=well_resistance.describe,
-    ),
-    Rule(
-        name=ring_width.NAME,
-        unit=ring_width.UNIT,
-        page=ring_width.__doc__ or "",
-        severity=lambda rules: rules.ring_width.severity,
-        check=lambda evidence, rules: ring_width.check(evidence, rules.ring_width),
-        describe=ring_width.describe,
-    ),
-    Rule(
-        name=ring_contacts.NAME,
-        unit=ring_contacts.UNIT,
-        page=ring_contacts.__doc__ or "",
-        severity=lambda rules: rules.ring_contacts.severity,
-        check=lambda evidence, rules: ring_contacts.check(evidence, rules.ring_contacts),
-        describe=ring_contacts.describe,
-    ),
-    Rule(
-        name=double_ring.NAME,
-        unit=double_ring.UNIT,
-        page=double_ring.__doc__ or "",
-        severity=lambda rules: rules.double_ring.severity,
-        check=lambda evidence, rules: double_ring.check(evidence, rules.double_ring),
-        describe=double_ring.describe,
-    ),
-    Rule(
-        name=well_spacing.NAME,
-        unit=well_spacing.UNIT,
-        page=well_spacing.__doc__ or "",
-        severity=lambda rules: rules.well_spacing.severity,
-        check=lambda evidence, rules: well_spacing.check(evidence, rules.well_spacing),
-        describe=well_spacing.describe,
-    ),
-    Rule(
-        name=uncontacted_tap.NAME,
-        unit=uncontacted_tap.UNIT,
-        page=uncontacted_tap.__doc__ or "",
-        severity=lambda rules: rules.uncontacted_tap.severity,
-        check=lambda evidence, _: uncontacted_tap.check(evidence),
-        describe=uncontacted_tap.describe,
-    ),
-    Rule(
-        name=net_names.NAME,
-        unit=net_names.UNIT,
-        page=net_names.__doc__ or "",
-        severity=lambda rules: rules.net_names.severity,
-        check=lambda evidence, _: net_names.check(evidence),
-        describe=net_names.describe,
-    ),
+    _listed(double_ring, lambda evidence, rules: double_ring.check(evidence, rules.double_ring)),
+    _listed(well_spacing, lambda evidence, rules: well_spacing.check(evidence, rules.well_spacing)),
+    _listed(uncontacted_tap, lambda evidence, _: uncontacted_tap.check(evidence)),
+    _listed(net_names, lambda evidence, _: net_names.check(evidence)),
 )
 """Untied bodies come first: no other rule can be evaluated for them."""
 

@@ -55,12 +55,12 @@ def test_odd_layout_paths_have_no_block(path: str) -> None:
 @pytest.mark.parametrize(
     ("text", "got"),
     [
-        ("format: latchscan-technology\nformat_version: 1\n", "got `latchscan-technology`"),
-        ("stages: [a, b]\n", "got none"),
-        ("format: 3\n", "got none"),
+        ("format: latchscan-bolck\npins: {}\n", "got `latchscan-bolck`"),
+        ("grounds: [VSS]\n", "got none"),
+        ("format: 3\nsupplies: {}\n", "got none"),
     ],
 )
-def test_another_file_beside_the_layout_is_not_passed_over(
+def test_a_block_file_that_does_not_say_so_is_not_passed_over(
     tmp_path: Path, text: str, got: str
 ) -> None:
     (tmp_path / "chip.yaml").write_text(text)
@@ -68,6 +68,14 @@ def test_another_file_beside_the_layout_is_not_passed_over(
         load_block_beside(tmp_path / "chip.gds")
     assert got in told.value.message
     assert "--block" in told.value.hint
+
+
+@pytest.mark.parametrize(
+    "text", ["format: latchscan-technology\nformat_version: 1\n", "stages: [a, b]\n", "format: 3\n"]
+)
+def test_a_file_of_another_kind_is_passed_over(tmp_path: Path, text: str) -> None:
+    (tmp_path / "chip.yaml").write_text(text)
+    assert load_block_beside(tmp_path / "chip.gds") is None
 
 
 def test_the_first_problem_is_told_with_its_place_and_the_count_of_the_others(

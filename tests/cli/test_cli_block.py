@@ -92,7 +92,7 @@ def test_a_file_given_wins_over_the_one_beside(asked: dict[str, Any], tmp_path: 
     ("text", "words"),
     [
         (f"{HEAD}grounds: [VSS]\ntop: 3\n", "chip.yaml:4:6: top: got the number 3, expected text"),
-        ("format: latchscan-technology\n", "stands beside the layout but is no block file"),
+        ("pins: {}\n", "stands beside the layout but is no block file"),
         ("", "chip.yaml:1:1: the file is empty, expected a block"),
     ],
 )
@@ -231,3 +231,19 @@ def test_check_reads_no_layout_code() -> None:
     )
     shown = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert shown.stdout.splitlines()[-1] == "[]"
+
+
+def test_a_name_that_the_layout_lacks_stops_the_scan_before_anything_long(
+    repository: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    block = block_file(tmp_path, "pins:\n  VALVE9: {kind: signal}\n", "b.yaml")
+    sample = str(repository / "samples" / "valve_driver.gds")
+    out = tmp_path / "out"
+    arguments = ["scan", sample, "--tech", "larch180", "--block", str(block), "--out", str(out)]
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr("latchscan.scan.derive_regions", None)
+        assert run(arguments) == 2
+    told = error_line(capsys)
+    assert told.startswith(f"{block}:4:3: no label of the layout is 'VALVE9'; expected")
+    assert "'VALVE3'" in told
+    assert not out.exists()

@@ -6,7 +6,7 @@ import itertools
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from latchscan.fields.squares import Flags, Floats, graded_lines, squares_between
@@ -30,6 +30,7 @@ def within(x: Floats, y: Floats, box: Box) -> Flags:
     return np.asarray(((y >= y0) & (y <= y1))[:, None] & ((x >= x0) & (x <= x1)))
 
 
+@settings(deadline=None)
 @given(length=st.floats(0.1, 50.0), width=st.floats(0.1, 50.0))
 def test_a_bar_has_length_over_width(length: float, width: float) -> None:
     # Source: Ohm's law in a uniform sheet, R = R_sh L / W
@@ -77,6 +78,7 @@ def test_a_terminal_off_the_sheet_is_not_a_number() -> None:
     assert np.isnan(found[0, 1])
 
 
+@settings(deadline=None)
 @given(st.lists(st.floats(-100.0, 100.0), min_size=2, max_size=8, unique=True))
 def test_lines_hold_every_edge_and_ascend(edges: list[float]) -> None:
     # Source: contract of `graded_lines`

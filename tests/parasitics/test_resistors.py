@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import shapely
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from shapely.affinity import rotate, scale, translate
 
@@ -55,6 +55,7 @@ def test_contacts_inside_a_strap() -> None:
     assert 6.8 < found < 8.5
 
 
+@settings(deadline=None)
 @given(
     angle=st.sampled_from([0, 90, 180, 270]),
     mirrored=st.booleans(),

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.constants import elementary_charge, k
 
@@ -14,6 +14,7 @@ CURRENT_A = 0.1
 TEMPERATURE_K = 398.15
 
 
+@settings(deadline=None)
 @given(st.lists(st.floats(1e-18, 1e-12), min_size=1, max_size=6))
 def test_without_resistance_areas_decide(saturation: list[float]) -> None:
     # Source: Shockley's diode law; equal voltages give currents as the saturation currents
@@ -22,6 +23,7 @@ def test_without_resistance_areas_decide(saturation: list[float]) -> None:
     assert found == pytest.approx(given_a / given_a.sum())
 
 
+@settings(deadline=None)
 @given(
     st.lists(
         st.tuples(st.floats(1e-18, 1e-12), st.sampled_from([0.0, 1e-3, 1.0, 50.0, 2e3, 1e6])),

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import difflib
 import fnmatch
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -80,6 +80,19 @@ def drafts_of_block(nets: Nets, loaded: LoadedBlock) -> list[PinDraft]:
     return [_block_pin(loaded.block, group, carriers) for group in _groups(loaded.block)]
 
 
+def require_texts(texts: Collection[str], loaded: LoadedBlock) -> None:
+    """Refuse a block file with a name that is no text of the layout at all.
+
+    Raises
+    ------
+    BlockError
+        At the first such name.
+    """
+    for name, place in _places(loaded.block):
+        if name not in texts:
+            raise BlockError(f"{loaded.where(*place)}: {_unknown(name, texts)}")
+
+
 def _places(block: Block) -> Iterator[tuple[str, tuple[str | int, ...]]]:
     """Every name of a block file with the key it stands under."""
     yield from ((name, ("pins", name)) for name in block.pins)
@@ -89,11 +102,15 @@ def _places(block: Block) -> Iterator[tuple[str, tuple[str | int, ...]]]:
         yield from ((name, ("joined", row, index)) for index, name in enumerate(group))
 
 
-def _missing(name: str, nets: Nets, carriers: Mapping[str, object]) -> str:
+def _missing(name: str, nets: Nets, carriers: Collection[str]) -> str:
     loose = [label for label in nets.labels if label.text == name]
     if loose:
         at = f"({loose[0].x_um:g}, {loose[0].y_um:g}) um"
         return f"every label of {name!r} lies on no shape; expected a conductor, got none at {at}"
+    return _unknown(name, carriers)
+
+
+def _unknown(name: str, carriers: Collection[str]) -> str:
     near = difflib.get_close_matches(name, sorted(carriers), n=3, cutoff=0.5)
     if near:
         expected = f"expected a name such as {' or '.join(repr(text) for text in near)}"

@@ -72,7 +72,8 @@ RAILS = {
     "schottky_nbl1": {"MINUS": {"nwell tap": 1}, "PLUS": {}, "TIE": {"substrate tap": 1}},
     "scr1": {"A": {"n": 1, "pwell tap": 1}, "B": {"n": 1, "pwell tap": 1}},
 }
-"""Emitters and taps on the net of each label of the clamps; fingers counted by hand."""
+"""Emitters and taps on the net of each label of the clamps: which kinds, by the labels' names;
+how many fingers, as traced once and held against change."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
