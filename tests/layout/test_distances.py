@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import doctest
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -15,7 +16,8 @@ from shapely import affinity
 
 from latchscan.errors import GeometryError, ResolutionError
 from latchscan.layout import distances
-from latchscan.layout.distances import measure_distances, measure_spacings
+from latchscan.layout.connections import BY_PIN, Injectors, Rings
+from latchscan.layout.distances import measure_distances, measure_spacings, own_collectors
 from latchscan.layout.measure import convex, farthest, neighbours, walls
 from latchscan.layout.measure.farthest import farthest_points
 from latchscan.layout.model import (
@@ -28,6 +30,7 @@ from latchscan.layout.model import (
     Regions,
     Taps,
 )
+from latchscan.layout.unconnected import no_injectors, no_rings
 from latchscan.tasks import Silent, Workers, open_workers
 
 GRID_UM = 0.005
@@ -509,6 +512,54 @@ def test_an_injector_without_a_partner_has_no_spacing() -> None:
     found = measure_spacings(build([(shapely.box(0, 0, 1, 1), P_IN_NWELL, 0, "VIO")]))
     assert found.body.tolist() == [-1]
     assert np.isnan(found.spacing_um[0])
+
+
+def guarded(*, anode_in_ring: bool, ring_around: int) -> tuple[Layout, Injectors, Rings]:
+    """An n+ at the origin in a guard well, which is a ring of `ring_around`; a well beyond."""
+    guard = shapely.box(-10, -10, 10, 10) - shapely.box(-8, -8, 8, 8)
+    far = shapely.box(30, -5, 40, 5)
+    layout = build(
+        [
+            (shapely.box(-1, -1, 1, 1), N_OUTSIDE_NWELL, 2, "VIO"),
+            (shapely.box(20, -1, 21, 1), N_OUTSIDE_NWELL, 2, "VIO"),
+            (shapely.box(-9.5, -9.5, -8.5, -8.5), P_IN_NWELL, 0 if anode_in_ring else 1, ""),
+        ],
+        bodies=[
+            nwell("nwell-1", guard),
+            nwell("nwell-2", far),
+            Body(id="pwell-1", kind="isolated_pwell", polygons=column([]), sheets=(), enclosing=0),
+        ],
+    )
+    injectors = replace(
+        no_injectors(), emitter=np.array([0, 1]), reason=np.full(2, BY_PIN), pin=np.zeros(2, int)
+    )
+    rings = replace(
+        no_rings(),
+        material=np.array(["nwell"]),
+        polygons=column([shapely.multipolygons([guard])]),
+        member_first=np.array([0, 1]),
+        member_injector=np.array([ring_around]),
+    )
+    return layout, injectors, rings
+
+
+def test_a_guard_well_is_no_target_of_what_it_guards() -> None:
+    layout, injectors, rings = guarded(anode_in_ring=True, ring_around=0)
+    collectors = own_collectors(layout, injectors, rings)
+    assert collectors.tolist() == [[0, 0]]
+    found = measure_spacings(layout, collectors)
+    # by hand: from x = 1 and from x = 21 to the far well at 30; unguarded, from 1 to 8
+    assert found.body.tolist() == [1, 1]
+    assert found.spacing_um.tolist() == pytest.approx([29.0, 9.0])
+    assert measure_spacings(layout).spacing_um.tolist() == pytest.approx([7.0, 9.0])
+
+
+def test_the_well_around_an_isolated_pwell_collects_unless_it_holds_an_anode() -> None:
+    layout, injectors, rings = guarded(anode_in_ring=False, ring_around=0)
+    assert own_collectors(layout, injectors, rings).tolist() == [[0, 0], [1, 0]]
+    layout, injectors, rings = guarded(anode_in_ring=True, ring_around=1)
+    assert own_collectors(layout, injectors, rings).tolist() == [[1, 0]]
+    assert own_collectors(layout, injectors, no_rings()).tolist() == []
 
 
 @pytest.mark.parametrize("module", [convex, farthest, neighbours, walls])
