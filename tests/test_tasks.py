@@ -8,12 +8,15 @@ import signal
 import subprocess
 import sys
 import time
+import traceback
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
+from types import FrameType
 
 import pytest
 
 from latchscan.errors import AnalysisError
-from latchscan.tasks import Silent, open_workers
+from latchscan.tasks import Silent, Workers, open_workers
 
 
 def test_results_come_in_the_order_of_the_items() -> None:
@@ -59,7 +62,7 @@ def _lost_or_slow(seconds: float) -> None:
 def test_workers_end_with_a_parent_that_is_killed() -> None:
     code = (
         "import multiprocessing, time\n"
-        "from latchscan.tasks import Silent, open_workers\n"
+        "from latchscan.tasks import Silent, Workers, open_workers\n"
         "with open_workers(2, Silent()) as workers:\n"
         "    workers.map('start', time.sleep, [0.01] * 4)\n"
         "    print(*(child.pid for child in multiprocessing.active_children()), flush=True)\n"
@@ -83,3 +86,35 @@ def _runs(process: int) -> bool:
     except FileNotFoundError:
         return False
     return state.split()[0] != "Z"
+
+
+class StoppedError(Exception):
+    """What the handler of a signal raises."""
+
+
+def signalled(item: int) -> int:
+    """Send this process a signal from within a task."""
+    os.kill(os.getpid(), signal.SIGTERM)
+    time.sleep(0.02)
+    return item
+
+
+def test_a_signal_acts_when_the_pool_is_left_alone_and_leaves_it_usable() -> None:
+    # Source: Python's signal module; a handler that raises while a lock is being taken leaves
+    # the lock taken
+    def stop(_number: int, _frame: FrameType | None) -> None:
+        inside = {frame.name for frame in traceback.extract_stack()}
+        assert not inside & {"submit", "result", "wait"}
+        raise StoppedError
+
+    before = signal.signal(signal.SIGTERM, stop)
+    try:
+        with ThreadPoolExecutor(1) as executor:
+            workers = Workers(executor=executor)
+            with pytest.raises(StoppedError):
+                workers.map("stopped", signalled, [0, 1, 2])
+            assert signal.getsignal(signal.SIGTERM) is stop
+            signal.signal(signal.SIGTERM, signal.SIG_IGN)
+            assert workers.map("again", abs, [-1, -2]) == [1, 2]
+    finally:
+        signal.signal(signal.SIGTERM, before)
