@@ -540,11 +540,11 @@ def test_texts_that_are_no_technology(
 
 
 def test_aliases_are_followed(larch: str) -> None:
-    text = larch.replace('"60/0"', '&pair "60/0"').replace("[VSS, VSSIO]", "[VSS, *pair]")
+    text = larch.replace('"60/0"', '&pair "60/0"').replace('"DVSS*", "GND*"]', "*pair]")
     technology, problems = validate(text, "own.yaml")
     assert problems == []
     assert technology is not None
-    assert technology.labels.ground_names == ("VSS", "60/0")
+    assert technology.labels.ground_names == ("VSS*", "AVSS*", "60/0")
 
 
 def test_many_aliases_are_capped() -> None:
