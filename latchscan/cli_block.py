@@ -82,8 +82,9 @@ def _misfits_of(loaded: LoadedBlock, layout: Path, tech: str) -> list[str]:
 
 
 def _pairs(technology: Technology) -> list[tuple[int, int]]:
-    split = (text.split("/") for text in technology.labels.layers)
-    return [(int(layer), int(texttype)) for layer, texttype in split]
+    from latchscan.technology.quantities import layer_numbers
+
+    return [layer_numbers(pair) for pair in technology.labels.layers]
 
 
 def _traced(source: LayoutSource, technology: Technology) -> Nets:

@@ -14,6 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 import shapely
 
+from latchscan.layout.components import connected
 from latchscan.layout.members import Members, gather_emitters, gather_taps
 from latchscan.layout.model import Body, Geometries, Ints, Layout, Regions, SheetKind, frozen
 from latchscan.technology.model import Technology
@@ -77,7 +78,7 @@ def assemble_layout(regions: Regions, technology: Technology) -> Layout:
 def _join_wells(regions: Regions) -> _Wells:
     nwell, buried = regions.shapes["nwell"], regions.shapes["buried"]
     well, layer = _overlaps(nwell, buried)
-    nodes = _components(len(nwell) + len(buried), well, layer + len(nwell))
+    nodes = connected(len(nwell) + len(buried), well, layer + len(nwell))
     order = _by_place(nwell, nodes[: len(nwell)])
     number = np.full(len(nwell) + len(buried), -1, dtype=np.int64)
     number[order] = np.arange(len(order))
@@ -98,16 +99,6 @@ def _overlaps(one: Geometries, other: Geometries) -> tuple[Ints, Ints]:
     area = shapely.area(shapely.intersection(one[first], other[second]))
     kept = area > LEAST_AREA_UM2
     return first[kept], second[kept]
-
-
-def _components(count: int, one: Ints, other: Ints) -> Ints:
-    """(count,) smallest member of each node's connected component."""
-    lead = np.arange(count)
-    while not np.array_equal(lead[one], lead[other]):
-        least = np.minimum(lead[one], lead[other])
-        np.minimum.at(lead, one, least)
-        np.minimum.at(lead, other, least)
-    return lead
 
 
 def _by_place(polygons: Geometries, group: Ints) -> Ints:

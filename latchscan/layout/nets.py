@@ -17,6 +17,7 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from latchscan.layout.components import connected
 from latchscan.layout.connections import Nets, Resistors
 from latchscan.layout.derive.geometry import SUBGRID
 from latchscan.layout.model import Floats, Geometries, Ints, frozen
@@ -39,7 +40,6 @@ from latchscan.layout.trace.devices import (
 )
 from latchscan.layout.trace.drawn import NetShapes, shapes_of_nets
 from latchscan.layout.trace.elements import elements_of_polygons
-from latchscan.layout.trace.graph import connected
 from latchscan.layout.trace.merging import Components, merge_tiles
 from latchscan.layout.trace.nodes import wire
 from latchscan.layout.trace.sharing import share_out

@@ -36,6 +36,7 @@ from latchscan.layout.runs import offsets
 from latchscan.layout.source import LayoutSource
 from latchscan.layout.unconnected import no_pins
 from latchscan.technology.model import Technology
+from latchscan.technology.quantities import layer_numbers
 
 __all__ = [
     "MOST_NETS_OF_A_NAME",
@@ -54,8 +55,7 @@ def require_names(source: LayoutSource, technology: Technology, block: LoadedBlo
         A name is no text of the layout.
     """
     if block is not None and technology.conductors is not None:
-        split = (pair.split("/") for pair in technology.text_layers())
-        labels = source.labels([(int(layer), int(texttype)) for layer, texttype in split])
+        labels = source.labels([layer_numbers(pair) for pair in technology.text_layers()])
         require_texts({label.text for label in labels}, block)
 
 

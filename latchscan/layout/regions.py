@@ -41,6 +41,7 @@ from latchscan.layout.model import (
 from latchscan.layout.source import LayoutSource
 from latchscan.tasks import Workers
 from latchscan.technology.model import Technology
+from latchscan.technology.quantities import layer_numbers
 
 TILES_A_SIDE = 3
 SMALLEST_TILE_UM = 100.0
@@ -118,7 +119,7 @@ def derive_regions(
     shapes = {
         name: rings_to_polygons(_joined(results, name, lines), unit) for name in DRAWN_REGIONS
     }
-    label_pairs = [_pair(text) for text in technology.labels.layers]
+    label_pairs = [layer_numbers(text) for text in technology.labels.layers]
     return Regions(
         bbox_um=_to_um(block, unit),
         shapes=shapes,
@@ -191,11 +192,6 @@ def region_statistics(regions: Regions) -> dict[str, RegionStatistics]:
     }
 
 
-def _pair(text: str) -> Pair:
-    layer, datatype = text.split("/")
-    return (int(layer), int(datatype))
-
-
 def _to_um(box: BoxDbu, unit_um: float) -> Box:
     x0, y0, x1, y1 = (value * unit_um for value in box)
     return (x0, y0, x1, y1)
@@ -264,7 +260,8 @@ def _nothing_found(source: LayoutSource, window_um: Box | None) -> LayoutError |
 def _used_layers(program: Program, technology: Technology) -> dict[str, tuple[Pair, ...]]:
     names = {*program.layers(wide=False), *program.layers(wide=True), *program.contact_layers}
     return {
-        name: tuple(_pair(text) for text in technology.layers[name].gds) for name in sorted(names)
+        name: tuple(layer_numbers(text) for text in technology.layers[name].gds)
+        for name in sorted(names)
     }
 
 

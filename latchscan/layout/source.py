@@ -24,6 +24,7 @@ from latchscan.layout.file.tables import Pair, load_tables
 from latchscan.layout.file.walk import PolygonColumns
 from latchscan.layout.model import Box, Ints, Label
 from latchscan.technology.model import Technology
+from latchscan.technology.quantities import layer_numbers
 
 __all__ = ["LayoutSource", "PolygonColumns", "open_layout"]
 
@@ -144,10 +145,11 @@ def open_layout(
     path = Path(path)
     sha256 = file_sha256(path)
     named = {
-        name: tuple(_pair(text) for text in layer.gds) for name, layer in technology.layers.items()
+        name: tuple(layer_numbers(text) for text in layer.gds)
+        for name, layer in technology.layers.items()
     }
     shape_pairs = sorted({pair for pairs in named.values() for pair in pairs})
-    label_pairs = {_pair(text) for text in technology.text_layers()}
+    label_pairs = {layer_numbers(text) for text in technology.text_layers()}
     folder = read_layout(
         path, shape_pairs=shape_pairs, text_pairs=sorted(label_pairs.union(shape_pairs))
     )
@@ -171,8 +173,3 @@ def open_layout(
 def _clean(value: float) -> float:
     """Without the last bits that a unit conversion left behind."""
     return float(f"{value:.12g}")
-
-
-def _pair(text: str) -> Pair:
-    layer, datatype = text.split("/")
-    return int(layer), int(datatype)

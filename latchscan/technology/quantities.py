@@ -27,13 +27,25 @@ LARGEST_LAYER = 65535
 
 
 def _require_two_bytes(pair: str) -> str:
-    if any(int(number) > LARGEST_LAYER for number in pair.split("/")):
+    if max(layer_numbers(pair)) > LARGEST_LAYER:
         raise PydanticCustomError(
             "layer_outside",
             "number out of range, expected 0 to {largest}",
             {"largest": LARGEST_LAYER},
         )
     return pair
+
+
+def layer_numbers(pair: str) -> tuple[int, int]:
+    """Layer and datatype (or texttype) of a pair.
+
+    Examples
+    --------
+    >>> layer_numbers("31/0")
+    (31, 0)
+    """
+    layer, datatype = pair.split("/")
+    return int(layer), int(datatype)
 
 
 LayerPair: TypeAlias = Annotated[

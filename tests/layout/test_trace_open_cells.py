@@ -45,7 +45,10 @@ def texts(path: Path, top: str, technology: Technology) -> list[tuple[str, str, 
     return found
 
 
-@pytest.mark.skipif(not FILES, reason="open layouts are absent; see tests/fetch_open_layouts.py")
+def test_the_open_layouts_are_there(open_layouts: Path) -> None:
+    assert len(FILES) == len(list(open_layouts.glob("*.gds"))) - len(BLANK)
+
+
 @pytest.mark.parametrize("name", FILES)
 def test_cells_are_traced_as_by_brute_force(name: str) -> None:
     path, technology = FOLDER / name, shipped_technology()

@@ -11,7 +11,7 @@ import shapely
 from net_layouts import UPRIGHT, outline
 from net_reference import filled
 
-from latchscan.layout.trace.graph import connected
+from latchscan.layout.components import connected
 from latchscan.layout.trace.rectangles import cut_filled
 from latchscan.layout.trace.touching import (
     BoxSet,

@@ -20,6 +20,7 @@ from latchscan.layout.model import WELL_TAP, Floats, Geometries, Ints, Layout
 from latchscan.layout.runs import offsets, within_runs
 from latchscan.layout.source import LayoutSource
 from latchscan.technology.model import Technology
+from latchscan.technology.quantities import layer_numbers
 
 NO_BOXES = np.zeros((0, 4))
 
@@ -95,7 +96,7 @@ def _around(source: LayoutSource, technology: Technology, strips: Geometries) ->
     layer = technology.layers.get(technology.roles.contact)
     if layer is None:
         return NO_BOXES
-    pairs = {(int(a), int(b)) for a, b in (pair.split("/") for pair in layer.gds)}
+    pairs = {layer_numbers(pair) for pair in layer.gds}
     unit = source.database_unit_um
     asked = np.rint(shapely.bounds(strips).reshape(-1, 4) / unit).astype(np.int64)
     found = [np.zeros((0, 4), dtype=np.int64)]

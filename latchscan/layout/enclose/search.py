@@ -13,10 +13,9 @@ from typing import Any
 
 import numpy as np
 import shapely
-from scipy.sparse import coo_array
-from scipy.sparse.csgraph import connected_components
 from scipy.spatial import Delaunay
 
+from latchscan.layout.components import connected
 from latchscan.layout.connections import Flags
 from latchscan.layout.enclose.outline import Outline, shortest_outline, whole_ring
 from latchscan.layout.enclose.promise import promising, stands_around
@@ -274,9 +273,8 @@ def _same_places(places: Geometries) -> Ints:
 
 
 def _components(count: int, links: Ints) -> tuple[int, Ints]:
-    graph = coo_array((np.ones(len(links)), tuple(links.T)), shape=(count, count))
-    components, label = connected_components(graph, directed=False)
-    return int(components), np.asarray(label, dtype=np.int64)
+    label = connected(count, links[:, 0], links[:, 1])
+    return int(label.max(initial=-1)) + 1, label
 
 
 def _near(

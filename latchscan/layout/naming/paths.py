@@ -6,8 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 import scipy.sparse
-from scipy.sparse.csgraph import connected_components, dijkstra
+from scipy.sparse.csgraph import dijkstra
 
+from latchscan.layout.components import connected
 from latchscan.layout.model import Floats, Ints
 from latchscan.layout.runs import offsets, within_runs
 
@@ -100,11 +101,7 @@ class Wires:
 
 def gather_wires(count: int, node: Ints, ohm: Floats) -> Wires:
     """Group links (e, 2) between `count` nodes by cluster."""
-    cluster = np.arange(count)
-    if len(node):
-        ones = np.ones(len(node))
-        graph = scipy.sparse.coo_array((ones, (node[:, 0], node[:, 1])), shape=(count, count))
-        cluster = np.asarray(connected_components(graph.tocsr(), directed=False)[1], np.int64)
+    cluster = connected(count, node[:, 0], node[:, 1])
     order = np.argsort(cluster[node[:, 0]], kind="stable")
     per_cluster = np.bincount(cluster[node[:, 0]], minlength=int(cluster.max(initial=-1)) + 1)
     return Wires(cluster=cluster, node=node[order], ohm=ohm[order], first=offsets(per_cluster))

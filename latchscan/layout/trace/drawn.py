@@ -15,10 +15,10 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from latchscan.layout.components import connected
 from latchscan.layout.derive.geometry import SUBGRID
 from latchscan.layout.model import Floats, Geometries, Ints
 from latchscan.layout.runs import within_runs
-from latchscan.layout.trace.graph import connected
 from latchscan.layout.trace.rectangles import joined_runs
 from latchscan.layout.trace.stack import Stack
 from latchscan.layout.trace.table import Table

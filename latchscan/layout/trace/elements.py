@@ -12,6 +12,7 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from latchscan.layout.components import connected
 from latchscan.layout.derive.geometry import (
     SUBGRID,
     bounding_boxes,
@@ -25,7 +26,6 @@ from latchscan.layout.derive.slabs import upright_rings
 from latchscan.layout.derive.stitching import Rings, join_rings, pick_rings, select_rings, stitch
 from latchscan.layout.model import Geometries, Ints
 from latchscan.layout.runs import offsets
-from latchscan.layout.trace.graph import connected
 from latchscan.layout.trace.rectangles import cut_filled
 from latchscan.layout.trace.touching import BoxSet, touching_between
 

@@ -10,9 +10,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from latchscan.layout.components import connected
 from latchscan.layout.model import Ints
 from latchscan.layout.trace.drawn import Shapes
-from latchscan.layout.trace.graph import connected
 from latchscan.layout.trace.stack import Stack
 from latchscan.layout.trace.tiles import Hits, TileNets
 

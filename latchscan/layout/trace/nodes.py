@@ -10,9 +10,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from latchscan.layout.components import connected
 from latchscan.layout.model import Ints
 from latchscan.layout.runs import offsets
-from latchscan.layout.trace.graph import connected
 from latchscan.layout.trace.merging import Components
 
 

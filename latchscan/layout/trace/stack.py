@@ -15,6 +15,7 @@ from latchscan.layout.file.tables import Pair
 from latchscan.technology.conductors import WELL_CONDUCTOR, Conductors
 from latchscan.technology.expressions import And, Expression, Name, Not, parse_expression
 from latchscan.technology.model import Technology
+from latchscan.technology.quantities import layer_numbers
 
 PADS = "bond pads"
 """Name of the pads' polygons; no name of a technology has a space in it."""
@@ -173,9 +174,5 @@ def _drawn(
 
 
 def _pairs(technology: Technology, names: tuple[str, ...]) -> tuple[Pair, ...]:
-    found: set[Pair] = set()
-    for name in names:
-        for text in technology.layers[name].gds:
-            layer, datatype = text.split("/")
-            found.add((int(layer), int(datatype)))
+    found = {layer_numbers(pair) for name in names for pair in technology.layers[name].gds}
     return tuple(sorted(found))

@@ -22,6 +22,7 @@ from latchscan.layout.source import LayoutSource
 from latchscan.layout.trace.sharing import Asked
 from latchscan.technology.conductors import Conductors
 from latchscan.technology.model import Technology
+from latchscan.technology.quantities import layer_numbers
 
 ANY = "any"
 """What a general text is expected on."""
@@ -58,8 +59,8 @@ def read_texts(source: LayoutSource, technology: Technology, conductors: Conduct
     own: dict[Pair, list[int]] = {}
     for number, layer in enumerate(conductors.layers.values()):
         for text in layer.texts:
-            own.setdefault(_pair(text), []).append(number)
-    general = {_pair(text) for text in technology.labels.layers}
+            own.setdefault(layer_numbers(text), []).append(number)
+    general = {layer_numbers(text) for text in technology.labels.layers}
     every = source.labels(sorted(general | set(own)))
     # A text stands in every copy of its cell: one look at each is enough.
     remarks = _remarks({label.text for label in every}, source.top, technology.labels.remark_names)
@@ -85,8 +86,3 @@ def _is_remark(text: str, top: str, like: Iterable[re.Pattern[str]]) -> bool:
     if not text or any(sign.isspace() for sign in text) or text.lower() == top.lower():
         return True
     return any(pattern.match(text.lower()) for pattern in like)
-
-
-def _pair(text: str) -> Pair:
-    layer, datatype = text.split("/")
-    return int(layer), int(datatype)

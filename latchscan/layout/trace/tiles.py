@@ -11,6 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from latchscan.layout.components import connected
 from latchscan.layout.derive.geometry import SUBGRID, bounding_boxes
 from latchscan.layout.derive.stitching import Rings, join_rings
 from latchscan.layout.derive.windows import BoxDbu
@@ -20,7 +21,6 @@ from latchscan.layout.model import Geometries, Ints
 from latchscan.layout.source import LayoutSource
 from latchscan.layout.trace.drawn import Shapes, open_shapes
 from latchscan.layout.trace.elements import Elements, cut_out, elements_of_rings
-from latchscan.layout.trace.graph import connected
 from latchscan.layout.trace.stack import PADS, Sort, Stack
 from latchscan.layout.trace.table import Table, fill_table
 from latchscan.layout.trace.touching import (

@@ -3,16 +3,14 @@
 from __future__ import annotations
 
 import numpy as np
+from scipy.sparse import coo_matrix
+from scipy.sparse.csgraph import connected_components
 
 from latchscan.layout.model import Ints
 
 
 def connected(count: int, one: Ints, other: Ints) -> Ints:
     """(count,) number of each node's connected component under the edges one[i]-other[i]."""
-    # the import takes longer than small blocks to trace
-    from scipy.sparse import coo_matrix  # noqa: PLC0415
-    from scipy.sparse.csgraph import connected_components  # noqa: PLC0415
-
     if not count:
         return np.zeros(0, dtype=np.int64)
     links = np.ones(len(one), dtype=np.int8)
